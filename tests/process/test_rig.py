@@ -86,8 +86,8 @@ def test_framing_of_a_hand_worked_feed() -> None:
     stretches = join_blocks([("a", 0, 12, 0), ("a", 12, 8, 12 * second), ("a", 25, 7, 25 * second), ("b", 0, 9, 0)])
     assert [(s.run, s.first, s.end) for s in stretches] == [("a", 0, 20), ("a", 25, 32), ("b", 0, 9)]
     maps, unused = frame_maps(stretches, 8, 1.0)
-    assert [(m.run, m.first, m.t_end // second) for m in maps] == [
-        ("a", 0, 8), ("a", 4, 12), ("a", 8, 16), ("a", 12, 20), ("b", 0, 8)]  # fmt: skip
+    assert [(m.run, m.first, m.t // second) for m in maps] == [
+        ("a", 0, 0), ("a", 4, 4), ("a", 8, 8), ("a", 12, 12), ("b", 0, 0)]  # fmt: skip
     assert unused == 7 + 1
 
 
