@@ -1,0 +1,170 @@
+"""process: one band: takes hops by credit, forms beams, publishes maps."""
+
+import time
+from collections import deque
+from typing import Any
+
+import numpy as np
+import zmq
+from soundrose.beam.stage import BandStage
+
+from soundrose.child import HEARTBEAT_S, Heartbeat, Orders, SlowLog, new_start, set_up_child
+from soundrose.errors import WireError
+from soundrose.feed.hop import Note
+from soundrose.feed.ring import Given
+from soundrose.feed.stream import Report, Welcome, decode_given, encode_report
+from soundrose.product.codec import Envelope
+from soundrose.product.messages import MapProduct
+from soundrose.product.publisher import Publisher
+from soundrose.settings_types import BandSettings, Settings
+
+__all__ = ["BandProcess", "BandTimes", "main"]
+
+_POLL_MS = 100
+_LATENCIES = 512  #: maps over which percentiles are taken
+_LOAD_S = 10.0  #: feed time over which the load is taken
+
+
+class BandTimes:
+    """How long the work takes: load over the last ten seconds of feed, latency percentiles over the last maps."""
+
+    def __init__(self, rate_hz: float) -> None:
+        self._rate_hz = rate_hz
+        self._work: deque[tuple[float, float]] = deque()  # (processing, feed) seconds of each hop
+        self._feed_s = self._busy_s = 0.0
+        self._latency_ms: deque[float] = deque(maxlen=_LATENCIES)
+
+    def hop(self, samples: int, busy_s: float) -> None:
+        feed_s = samples / self._rate_hz
+        self._work.append((busy_s, feed_s))
+        self._busy_s += busy_s
+        self._feed_s += feed_s
+        while self._feed_s > _LOAD_S and len(self._work) > 1:
+            busy, feed = self._work.popleft()
+            self._busy_s -= busy
+            self._feed_s -= feed
+
+    def latency(self, milliseconds: float) -> None:
+        self._latency_ms.append(milliseconds)
+
+    def facts(self) -> dict[str, Any]:
+        """`load` and `latency_ms` as the status message has them."""
+        load = round(self._busy_s / self._feed_s, 4) if self._feed_s > 0 else 0.0
+        if not self._latency_ms:
+            return {"load": load, "latency_ms": {"p50": None, "p99": None}}
+        p50, p99 = np.percentile(np.fromiter(self._latency_ms, float), [50, 99])
+        return {"load": load, "latency_ms": {"p50": round(float(p50), 2), "p99": round(float(p99), 2)}}
+
+
+class BandProcess:
+    """The sockets around a `BandStage`."""
+
+    def __init__(self, orders: Orders, band: BandSettings, context: "zmq.Context[zmq.Socket[bytes]]") -> None:
+        self._settings: Settings = orders.settings
+        self._band = band
+        self._start = new_start()
+        self._log = SlowLog()
+        self._stage = BandStage(orders.settings, band)
+        self._times = BandTimes(orders.settings.feed.rate_hz)
+        self._maps = self._dropped_hops = self._taken = 0
+        self._ingest = ""
+        self._report_due = 0.0
+        self._hops = context.socket(zmq.DEALER)
+        self._hops.setsockopt(zmq.IDENTITY, band.name.encode())
+        self._hops.setsockopt(zmq.LINGER, 0)
+        self._hops.setsockopt(zmq.RECONNECT_IVL, 20)
+        self._hops.setsockopt(zmq.RECONNECT_IVL_MAX, 200)
+        self._hops.setsockopt(zmq.IMMEDIATE, 1)
+        self._hops.connect(orders.endpoints["stream"])
+        self._publisher = Publisher(
+            context,
+            orders.endpoints["collect"],
+            Envelope(orders.settings.array.id, self._start),
+            patient=orders.settings.feed.overload == "hold",
+            largest=4 * band.beams * band.frame // 2,
+        )
+
+    @property
+    def joined(self) -> bool:
+        """Ingest has answered."""
+        return bool(self._ingest)
+
+    def turn(self) -> None:
+        """Once round: take what came from ingest, or wait a little for it."""
+        if time.monotonic() >= self._report_due:
+            self._report()
+        if not self._hops.poll(_POLL_MS):
+            return
+        try:
+            message = decode_given([frame.buffer for frame in self._hops.recv_multipart(copy=False)])
+        except WireError as error:
+            self._log.warn("stream", str(error))
+            return
+        match message:
+            case Welcome():
+                if message.ingest != self._ingest:
+                    self._ingest, self._taken = message.ingest, 0
+                self._report()
+            case Given():
+                self._take(message)
+                self._taken += 1
+                self._report()
+
+    def facts(self) -> dict[str, Any]:
+        return {
+            **self._times.facts(),
+            "maps": self._maps,
+            "dropped_hops": self._dropped_hops,
+            "gaps": self._stage.gaps,
+            "kernel": self._stage.kernel,
+        }
+
+    def close(self) -> None:
+        self._hops.close()
+        self._publisher.close()
+
+    def _report(self) -> None:
+        self._report_due = time.monotonic() + HEARTBEAT_S
+        report = Report(self._band.name, self._start, self._ingest, self._taken)
+        try:
+            self._hops.send(encode_report(report), zmq.NOBLOCK)
+        except zmq.Again:  # ingest is away; the next report says the same
+            pass
+
+    def _take(self, given: Given) -> None:
+        begun = time.perf_counter()
+        for note in given.notes:
+            self._note(note)
+        self._dropped_hops += given.missed
+        products = self._stage.push(given.hop, given.missed)
+        for product in products:
+            self._publish(product)
+        self._times.hop(given.hop.length, time.perf_counter() - begun)
+
+    def _note(self, note: Note) -> None:
+        self._stage.note(note)
+
+    def _publish(self, product: MapProduct) -> None:
+        latency_ms = round((time.monotonic_ns() - product.received_ns) / 1e6, 3)
+        self._publisher.send_map(product, latency_ms)
+        self._times.latency(latency_ms)
+        self._maps += 1
+
+
+def main(orders: Orders) -> int:
+    """Run the band that the orders name (`band:NAME`) until the lifeline ends."""
+    lifeline = set_up_child(orders)
+    context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
+    heart = Heartbeat(context, orders.endpoints["control"], orders.name)
+    heart.beat(ready=False)
+    process = BandProcess(orders, orders.settings.band(orders.name.removeprefix("band:")), context)
+    try:
+        while not lifeline.ending.is_set():
+            process.turn()
+            if heart.due:
+                heart.beat(ready=process.joined, facts=process.facts())
+    finally:
+        process.close()
+        heart.close()
+        context.term()
+    return 0

@@ -1,0 +1,178 @@
+"""process: ingest: takes the feed, hands hops to bands by credit, publishes the hydrophones' health."""
+
+import time
+from typing import Any
+
+import zmq
+from soundrose.feed.intake import Intake
+from zmq.utils.monitor import recv_monitor_message
+
+from soundrose.child import Heartbeat, Orders, SlowLog, new_start, set_up_child
+from soundrose.errors import WireError
+from soundrose.feed.hop import Hop, RunEnd, hop_length
+from soundrose.feed.record import SharedRecord
+from soundrose.feed.ring import HopRing, ring_capacity
+from soundrose.feed.stream import decode_report, encode_given, encode_welcome
+from soundrose.product.codec import Envelope
+from soundrose.product.messages import HealthProduct
+from soundrose.product.proxy import bind_or_explain
+from soundrose.product.publisher import Publisher
+from soundrose.settings_types import Settings
+
+__all__ = ["IngestProcess", "feed_queue", "main"]
+
+LARGEST_FRAME = 96 * 2**20  #: contract: a larger frame cuts its connection
+_QUEUE_BYTES = 128 * 2**20
+_BATCH = 32  #: feed messages between two looks at the bands
+_POLL_MS = 100
+
+
+def feed_queue(settings: Settings) -> int:
+    """Messages that wait in the feed socket per source: 128 MiB of the largest legal block."""
+    largest = 4 * settings.array.channels * int(settings.feed.rate_hz)
+    return max(8, min(64, _QUEUE_BYTES // largest))
+
+
+class IngestProcess:
+    """The sockets around an `Intake` and a `HopRing`."""
+
+    def __init__(self, orders: Orders, context: "zmq.Context[zmq.Socket[bytes]]") -> None:
+        settings = orders.settings
+        self._record = SharedRecord(orders.record_fd)
+        self._intake = Intake(settings, self._record.read() or None)
+        frames = [band.frame for band in settings.bands]
+        hop = hop_length(frames)
+        self._ring = HopRing(
+            ring_capacity(hop, settings.feed.rate_hz, frames),
+            settings.feed.overload == "hold",
+            [band.name for band in settings.bands],
+        )
+        self._start = new_start()
+        self._log = SlowLog()
+        self._disconnects = 0
+        self._feed = context.socket(zmq.PULL)
+        self._feed.setsockopt(zmq.RCVHWM, feed_queue(settings))
+        self._feed.setsockopt(zmq.MAXMSGSIZE, LARGEST_FRAME)
+        self._feed.setsockopt(zmq.LINGER, 0)
+        self._feed.setsockopt(zmq.HEARTBEAT_IVL, 5000)
+        self._feed.setsockopt(zmq.HEARTBEAT_TIMEOUT, 15000)
+        self._monitor = self._feed.get_monitor_socket(zmq.EVENT_DISCONNECTED)
+        self._bands = context.socket(zmq.ROUTER)
+        self._bands.setsockopt(zmq.LINGER, 0)
+        self._bands.setsockopt(zmq.SNDHWM, 64)
+        self._bands.setsockopt(zmq.ROUTER_HANDOVER, 1)
+        bind_or_explain(self._bands, orders.endpoints["stream"], "stream.bind")
+        self.endpoint = bind_or_explain(self._feed, orders.endpoints["feed"], "feed.bind")
+        self._publisher = Publisher(context, orders.endpoints["collect"], Envelope(settings.array.id, self._start))
+        self._poller = zmq.Poller()
+        self._poller.register(self._bands, zmq.POLLIN)
+        self._poller.register(self._monitor, zmq.POLLIN)
+        self._reading = False
+
+    def turn(self) -> None:
+        """Once round: wait for something, take it, hand on what can be handed on."""
+        self._read_feed(not self._ring.blocked)
+        ready = dict(self._poller.poll(_POLL_MS))
+        if self._bands in ready:
+            self._take_reports()
+        if self._feed in ready:
+            self._take_feed()
+        if self._monitor in ready:
+            while self._monitor.poll(0):
+                recv_monitor_message(self._monitor)
+                self._disconnects += 1
+        self._hand_on()
+
+    def facts(self) -> dict[str, Any]:
+        return {"feed": self.endpoint, "disconnects": self._disconnects, "held": self._ring.held}
+
+    def close(self) -> None:
+        self._feed.disable_monitor()
+        self._monitor.close()
+        self._feed.close()
+        self._bands.close()
+        self._publisher.close()
+        self._record.close()
+
+    def _read_feed(self, wanted: bool) -> None:
+        if wanted and not self._reading:
+            self._poller.register(self._feed, zmq.POLLIN)
+        elif self._reading and not wanted:
+            self._poller.unregister(self._feed)
+        self._reading = wanted
+
+    def _take_feed(self) -> None:
+        for _ in range(_BATCH):
+            try:
+                frames = self._feed.recv_multipart(zmq.NOBLOCK, copy=False)
+            except zmq.Again:
+                return
+            self._take_message([frame.buffer for frame in frames])
+            self._hand_on()
+            if self._ring.blocked:
+                return
+
+    def _take_message(self, parts: list[memoryview]) -> None:
+        dropped = self._intake.counters.dropped_total
+        for outcome in self._intake.push(parts, time.monotonic_ns()):
+            match outcome:
+                case Hop():
+                    self._ring.add_hop(outcome)
+                case HealthProduct():
+                    self._publisher.send_plain("health", outcome.header)
+                case RunEnd():
+                    pass  # the next hop's epoch says it
+                case _:
+                    self._ring.add_note(outcome)
+        self._record.write(self._intake.snapshot())
+        if self._intake.counters.dropped_total != dropped and self._intake.last_drop is not None:
+            reason, detail = self._intake.last_drop
+            self._log.warn(reason, f"feed message dropped as {reason}: {detail}")
+
+    def _take_reports(self) -> None:
+        while True:
+            try:
+                identity, *parts = self._bands.recv_multipart(zmq.NOBLOCK)
+            except zmq.Again:
+                return
+            try:
+                report = decode_report(parts[0])
+                known = self._ring.session(report.band)
+            except (WireError, KeyError, IndexError) as error:
+                self._log.warn("report", f"a band's report was not taken: {error}")
+                continue
+            if report.ingest == self._start and known == report.session:
+                self._ring.acknowledge(report.band, report.taken)
+            elif identity == report.band.encode():
+                self._welcome(identity, report.band, report.session)
+
+    def _welcome(self, identity: bytes, band: str, session: str) -> None:
+        """A band has come, or has come again, or knows another ingest: begin anew with it, once per session."""
+        if self._ring.session(band) != session:
+            self._ring.join(band, session, self._intake.in_force())
+        self._bands.send_multipart([identity, *encode_welcome(self._start)])
+
+    def _hand_on(self) -> None:
+        for band in self._ring.bands:
+            while (given := self._ring.take(band)) is not None:
+                self._bands.send_multipart([band.encode(), *encode_given(given)], copy=False)
+
+
+def main(orders: Orders) -> int:
+    """Run ingest until the lifeline ends."""
+    lifeline = set_up_child(orders)
+    context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
+    heart = Heartbeat(context, orders.endpoints["control"], orders.name)
+    process: IngestProcess | None = None
+    try:
+        process = IngestProcess(orders, context)
+        while not lifeline.ending.is_set():
+            process.turn()
+            if heart.due:
+                heart.beat(ready=True, facts=process.facts())
+    finally:
+        if process is not None:
+            process.close()
+        heart.close()
+        context.destroy(linger=0)
+    return 0

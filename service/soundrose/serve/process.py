@@ -1,0 +1,135 @@
+"""process: serve: subscribes to what the service publishes and answers HTTP."""
+
+import asyncio
+import contextlib
+import socket
+import time
+from urllib.parse import urlsplit
+
+import uvicorn
+import zmq
+import zmq.asyncio
+
+from soundrose.child import HEARTBEAT_S, Heartbeat, Lifeline, Orders, SlowLog, set_up_child
+from soundrose.errors import StartError, WireError
+from soundrose.product.codec import decode_published
+from soundrose.serve.app import Source, make_app
+from soundrose.serve.guard import Guard, host_names
+from soundrose.serve.latest import Latest, Message, not_ready
+
+__all__ = ["connect_address", "listen", "main"]
+
+_GRACE_S = 1
+
+
+def connect_address(endpoint: str) -> str:
+    """Where to connect to reach a socket bound at `endpoint` on this machine."""
+    for everywhere in ("0.0.0.0", "*"):
+        endpoint = endpoint.replace(f"//{everywhere}:", "//127.0.0.1:")
+    return endpoint
+
+
+def listen(host: str, port: int) -> socket.socket:
+    """A listening socket. StartError if the address is taken or not ours."""
+    family = socket.AF_INET6 if ":" in host else socket.AF_INET
+    listener = socket.socket(family, socket.SOCK_STREAM)
+    listener.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
+    try:
+        listener.bind((host, port))
+    except OSError as error:
+        listener.close()
+        raise StartError(
+            f"serve.port: cannot listen at {host}:{port}: {error.strerror}. Is another service running there? "
+            f"End it, or choose another serve.port."
+        ) from None
+    listener.listen(256)
+    return listener
+
+
+async def _collect(subscriber: zmq.asyncio.Socket, latest: Latest) -> None:
+    log = SlowLog()
+    while True:
+        frames = await subscriber.recv_multipart(copy=False)
+        try:
+            topic, header, data = decode_published([frame.buffer for frame in frames])
+        except WireError as error:
+            log.warn("published", str(error))
+            continue
+        latest.put(Message(topic, header, data, time.monotonic()))
+
+
+async def _beat(orders: Orders, server: uvicorn.Server, latest: Latest, address: str) -> None:
+    context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
+    heart = Heartbeat(context, orders.endpoints["control"], orders.name)
+    try:
+        while True:
+            status = latest.get("status")
+            ready = server.started and status is not None
+            sees_all = ready and not not_ready(status, time.monotonic())
+            heart.beat(ready=ready, facts={"http": address, "sees_all": sees_all})
+            await asyncio.sleep(HEARTBEAT_S / 5 if not sees_all else HEARTBEAT_S)
+    finally:
+        heart.close()
+        context.term()
+
+
+async def _end_with(lifeline: Lifeline, server: uvicorn.Server) -> None:
+    while not lifeline.ending.is_set():
+        await asyncio.sleep(0.05)
+    server.should_exit = True
+
+
+async def _serve(orders: Orders, lifeline: Lifeline, listener: socket.socket, host: str) -> None:
+    port = listener.getsockname()[1]
+    latest = Latest()
+    context = zmq.asyncio.Context()
+    subscriber = context.socket(zmq.SUB)
+    subscriber.setsockopt(zmq.RCVHWM, 64)
+    subscriber.setsockopt(zmq.LINGER, 0)
+    subscriber.setsockopt(zmq.RECONNECT_IVL, 20)
+    subscriber.setsockopt(zmq.RECONNECT_IVL_MAX, 200)
+    subscriber.setsockopt(zmq.SUBSCRIBE, b"")
+    app = make_app(Source(orders.settings, latest, time.monotonic))
+    config = uvicorn.Config(
+        Guard(app, host_names(host, port, _own_names())),
+        log_config=None,
+        log_level="warning",
+        access_log=False,
+        server_header=False,
+        timeout_graceful_shutdown=_GRACE_S,
+        ws_max_size=64 * 1024,
+        ws_per_message_deflate=False,
+    )
+    server = uvicorn.Server(config)
+    shown = f"[{host}]" if ":" in host else host
+    try:
+        subscriber.connect(connect_address(orders.endpoints["publish"]))
+        async with asyncio.TaskGroup() as tasks:
+            running = [
+                tasks.create_task(_collect(subscriber, latest)),
+                tasks.create_task(_beat(orders, server, latest, f"http://{shown}:{port}")),
+                tasks.create_task(_end_with(lifeline, server)),
+            ]
+            await server.serve(sockets=[listener])
+            for task in running:
+                task.cancel()
+    finally:
+        subscriber.close()
+        context.term()
+
+
+def _own_names() -> list[str]:
+    names = {socket.gethostname(), socket.getfqdn()}
+    with contextlib.suppress(OSError):
+        names.update(str(found[4][0]) for found in socket.getaddrinfo(socket.gethostname(), None))
+    return sorted(names)
+
+
+def main(orders: Orders) -> int:
+    """Serve until the lifeline ends."""
+    lifeline = set_up_child(orders)
+    address = urlsplit(orders.endpoints["http"])
+    host = address.hostname or "127.0.0.1"
+    listener = listen(host, address.port or 0)
+    asyncio.run(_serve(orders, lifeline, listener, host))
+    return 0
