@@ -27,7 +27,7 @@ def back_off_s(failures: int) -> float:
 
 
 class Child:
-    """A process `python -m soundrose child NAME` with its orders in a memory file and its lifeline on standard input."""
+    """A process `python -m soundrose child N`: its orders in a memory file, its lifeline on standard input."""
 
     def __init__(self, name: str) -> None:
         self.name = name

@@ -17,7 +17,7 @@ EXIT_CONFIG = 2
 
 app = typer.Typer(
     name="soundrose",
-    help="Real-time broadband beamforming for a hydrophone line array: where sound comes from, at which frequencies, how loud.",
+    help="Real-time broadband beamforming for a hydrophone line array: from where, at which frequencies, how loud.",
     no_args_is_help=True,
     add_completion=False,
     rich_markup_mode=None,

@@ -4,9 +4,21 @@ from dataclasses import asdict, dataclass
 from typing import Any, Literal
 
 __all__ = [
-    "ArraySettings", "BandSettings", "CalibrationSettings", "DetectionSettings", "FeedSettings", "Overload", "Place",
-    "PublishSettings", "ServeSettings", "Settings", "ShadingName", "StoreSettings", "StreamSettings", "WaterSettings",
+    "ArraySettings",
+    "BandSettings",
+    "CalibrationSettings",
+    "DetectionSettings",
+    "FeedSettings",
     "KernelChoice",
+    "Overload",
+    "Place",
+    "PublishSettings",
+    "ServeSettings",
+    "Settings",
+    "ShadingName",
+    "StoreSettings",
+    "StreamSettings",
+    "WaterSettings",
 ]  # fmt: skip
 
 ShadingName = Literal["uniform", "hann", "hamming", "chebyshev", "taylor"]
@@ -79,7 +91,7 @@ class BandSettings:
 
 @dataclass(frozen=True, slots=True)
 class DetectionSettings:
-    """enabled; pfa, false-alarm probability per beam and map; integrate_s (None: the band's average_s); input limits."""
+    """enabled; pfa, false-alarm probability per beam and map; integrate_s (None: the band's average_s); most input."""
 
     enabled: bool = True
     pfa: float = 1e-6

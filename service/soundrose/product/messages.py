@@ -19,7 +19,7 @@ LEVEL_FLOOR_DB = -300.0  #: zero power reads this; levels are finite
 class MapProduct:
     """One frequency-bearing map of a band.
 
-    header : every key of the published map but `v`, `kind`, `array`, `seq`, `start`, `latency_ms`, which the sender adds.
+    header : the published map's keys but `v`, `kind`, `array`, `seq`, `start`, `latency_ms`, which the sender adds.
     level_db : (beams, bins) float32, dB re 1 micropascal^2/Hz, plane-wave equivalent, C-contiguous.
     received_ns : host monotonic clock at receipt of the frame's last sample (0 offline).
     """
