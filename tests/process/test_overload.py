@@ -148,7 +148,7 @@ def test_each_map_is_near_the_newest_sample(outcome: Outcome) -> None:
 def test_maps_that_come_hold_what_their_hops_hold(outcome: Outcome) -> None:
     """Levels against float64 beams: content aged over what was missed, flagged as a gap while that is young."""
     firsts = first_samples(outcome)[:120]
-    exact = ExactMap(SEA, ARRAY.positions_m[:, 0], WEIGHTS, ARRAY.rate_hz, ARRAY.sound_speed_m_s)
+    exact = ExactMap(SEA * ARRAY.full_scale_upa, ARRAY.positions_m[:, 0], WEIGHTS, ARRAY.rate_hz, ARRAY.sound_speed_m_s)
     header = outcome.maps[0].header
     share = -(-BEAMS // MAP_BEAMS)
     grid = np.linspace(1, -1, BEAMS)

@@ -89,6 +89,10 @@ class Feeder:
             count += 1
         return count
 
+    def abandon(self) -> None:
+        """Forget what was not taken, where the service is gone."""
+        self._socket.setsockopt(zmq.LINGER, 0)
+
     def close(self) -> None:
         self._socket.close()
         self._context.term()
