@@ -34,6 +34,7 @@ class Child:
         self.state: ChildState = "down"
         self.since_ns = time.time_ns()
         self.restarts = -1  # the first start is none
+        self.why: str | None = None  # of its last end; None while all is well
         self.facts: dict[str, Any] = {}
         self._process: subprocess.Popen[bytes] | None = None
         self._failures = 0
@@ -103,7 +104,12 @@ class Child:
         else:
             why = f"ended by signal {signal.Signals(-code).name}" if code < 0 else f"ended with status {code}"
         self._clear(now)
+        self.why = f"{why}; {self._failures} in a row" if self._failures > 1 else why
         return why
+
+    def excuse(self) -> None:
+        """The supervisor was not listening until now: count silence from here."""
+        self._heard = time.monotonic()
 
     @property
     def exit_code(self) -> int | None:

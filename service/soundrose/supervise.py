@@ -17,6 +17,7 @@ from soundrose.child import Orders, new_start, set_up_logging
 from soundrose.children import Child
 from soundrose.errors import StartError
 from soundrose.feed.record import SharedRecord, make_record_file
+from soundrose.notify import Systemd
 from soundrose.product.codec import Envelope
 from soundrose.product.publisher import Publisher
 from soundrose.settings_types import BandSettings, Settings
@@ -28,6 +29,7 @@ __all__ = ["Supervisor", "run_service"]
 _TICK_MS = 50
 _STATUS_S = 1.0
 _END_S = 4.0  #: contract: an orderly end within 5 s
+_PAUSE_S = 1.0  #: a turn longer than this: this process itself was held up, and no child is to blame
 _GIVE_UP = 5  #: failures in a row of one child before the service was ever ready
 _log = logging.getLogger("soundrose")
 
@@ -52,6 +54,8 @@ class Supervisor:
         self._ending = False
         self._ready = False
         self._status_due = 0.0
+        self._systemd = Systemd()
+        self._turned = time.monotonic()
         self._control = self._context.socket(zmq.PULL)
         self._control.setsockopt(zmq.LINGER, 0)
         self._control.bind(self._endpoints["control"])
@@ -68,10 +72,13 @@ class Supervisor:
             while not self._ending and code == 0:
                 self._start_due()
                 self._take_beats()
+                self._excuse_own_pause()
                 code = self._check_children()
                 self._publish_when_due()
                 self._say_ready()
+                self._systemd.watchdog()
         finally:
+            self._systemd.stopping()
             self._end_children()
             self._publisher.close()
             self._control.close()
@@ -82,6 +89,14 @@ class Supervisor:
 
     def _end(self, *_: object) -> None:
         self._ending = True
+
+    def _excuse_own_pause(self) -> None:
+        """Beats that came while this process was held up are only being read now: do not count the pause."""
+        now = time.monotonic()
+        if now - self._turned > _PAUSE_S:
+            for child in self._children.values():
+                child.excuse()
+        self._turned = now
 
     def _start_due(self) -> None:
         for child in self._children.values():
@@ -186,6 +201,7 @@ class Supervisor:
                 "pid": child.pid,
                 "restarts": max(child.restarts, 0),
                 "since": child.since_ns,
+                "why": child.why,
             }
             for child in self._children.values()
         ]
@@ -196,6 +212,7 @@ class Supervisor:
                 "pid": None,
                 "restarts": 0,
                 "since": self._service_start,
+                "why": None,
             }
             for name, heard in self._elsewhere.items()
         ]
@@ -210,6 +227,7 @@ class Supervisor:
         line = {"ready": True, **{key: self._endpoints[key] for key in ("feed", "publish", "http")}}
         self._out.write(json.dumps(line) + "\n")
         self._out.flush()
+        self._systemd.ready()
 
     def _end_children(self) -> None:
         """The feed's end first, so that what was taken is worked off; then all others; then by force."""

@@ -141,6 +141,27 @@ def test_drop_tells_a_band_that_came_back_what_was_missed():
     assert numbers_taken(ring) == [(4, 3)]
 
 
+def test_first_hop_of_a_band_that_came_back_is_marked_resumed_and_no_other():
+    ring = HopRing(3, False, ["a"])
+    ring.join("a", "first", ())
+    ring.add_hop(hop(0))
+    assert not ring.take("a").resumed
+    ring.acknowledge("a", 1)
+    ring.join("a", "second", ())
+    ring.add_hop(hop(1))
+    ring.add_hop(hop(2))
+    assert ring.take("a").resumed
+    assert not ring.take("a").resumed
+
+
+def test_band_that_followed_another_ingest_is_marked_resumed():
+    ring = HopRing(3, False, ["a"])
+    ring.join("a", "s", (), followed=True)
+    ring.add_hop(hop(0))
+    given = ring.take("a")
+    assert (given.resumed, given.missed) == (True, 0)
+
+
 def test_notes_come_with_the_hop_after_them_even_if_hops_were_lost():
     ring = HopRing(2, False, ["a"])
     ring.join("a", "s", (note(0),))

@@ -36,7 +36,7 @@ def make_given(channels: int, length: int, seed: int, missed: int) -> Given:
         Positions(8, rng.standard_normal((channels, 3))),
         Pulse(9, "gun", 0.2),
     )
-    return Given(hop, notes, missed)
+    return Given(hop, notes, missed, seed % 2 == 1)
 
 
 @given(st.integers(1, 5), st.integers(1, 40), st.integers(0, 99), st.integers(0, 1000))
@@ -51,6 +51,7 @@ def test_hop_comes_out_as_it_went_in(channels, length, seed, missed):
         np.testing.assert_array_equal(left, right)
     assert (after.hop.run, after.hop.epoch, after.hop.first) == (before.hop.run, before.hop.epoch, before.hop.first)
     assert (after.hop.received_ns, after.missed) == (before.hop.received_ns, missed)
+    assert after.resumed == before.resumed
     assert after.notes[0] == before.notes[0]
     np.testing.assert_array_equal(after.notes[1].positions_m, before.notes[1].positions_m)
     assert after.notes[2] == before.notes[2]

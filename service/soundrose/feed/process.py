@@ -12,7 +12,7 @@ from soundrose.errors import WireError
 from soundrose.feed.hop import Hop, RunEnd, hop_length
 from soundrose.feed.record import SharedRecord
 from soundrose.feed.ring import HopRing, ring_capacity
-from soundrose.feed.stream import decode_report, encode_given, encode_welcome
+from soundrose.feed.stream import Report, decode_report, encode_given, encode_welcome
 from soundrose.product.codec import Envelope
 from soundrose.product.messages import HealthProduct
 from soundrose.product.proxy import bind_or_explain
@@ -144,12 +144,13 @@ class IngestProcess:
             if report.ingest == self._start and known == report.session:
                 self._ring.acknowledge(report.band, report.taken)
             elif identity == report.band.encode():
-                self._welcome(identity, report.band, report.session)
+                self._welcome(identity, report)
 
-    def _welcome(self, identity: bytes, band: str, session: str) -> None:
+    def _welcome(self, identity: bytes, report: Report) -> None:
         """A band has come, or has come again, or knows another ingest: begin anew with it, once per session."""
-        if self._ring.session(band) != session:
-            self._ring.join(band, session, self._intake.in_force())
+        if self._ring.session(report.band) != report.session:
+            followed = report.ingest != ""
+            self._ring.join(report.band, report.session, self._intake.in_force(), followed=followed)
         self._bands.send_multipart([identity, *encode_welcome(self._start)])
 
     def _hand_on(self) -> None:

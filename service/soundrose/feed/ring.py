@@ -31,11 +31,15 @@ def ring_capacity(hop: int, rate_hz: float, frames: Sequence[int]) -> int:
 
 @dataclass(frozen=True, slots=True)
 class Given:
-    """One hop for one band: the notes that come before it, and how many hops the band missed before it."""
+    """One hop for one band: the notes that come before it, and how many hops the band missed before it.
+
+    resumed : the first since the band's process or ingest was started anew; to the band it comes after a gap.
+    """
 
     hop: Hop
     notes: tuple[Note, ...]
     missed: int
+    resumed: bool = False
 
 
 @dataclass(slots=True)
@@ -45,6 +49,7 @@ class _Band:
     acknowledged: int = 0  # ordinal after the last hop it is done with
     note: int = 0  # ordinal of the note to give next
     first_missed: int = 0  # missed hops to be told with the next one given
+    resumed: bool = False  # it, or ingest, was started anew since it was given a hop
     waiting: tuple[Note, ...] = ()  # notes in force, for a band that has just joined
     taken: int = 0  # hops it has said it is done with since it joined
     given: deque[int] = field(default_factory=deque)  # ordinals on their way to it
@@ -82,11 +87,15 @@ class HopRing:
             self._notes.popleft()
             self._first_note += 1
 
-    def join(self, name: str, session: str, in_force: Sequence[Note]) -> None:
+    def join(self, name: str, session: str, in_force: Sequence[Note], *, followed: bool = False) -> None:
         """A band process has come (again). In `hold` it goes on where the last one had acknowledged; in `drop` it
-        begins with the next hop and is told what was missed meanwhile. KeyError: no such band."""
+        begins with the next hop and is told what was missed meanwhile. KeyError: no such band.
+
+        in_force : notes that a band must know to begin.  followed : it has taken hops from another ingest before.
+        """
         band = self._bands[name]
         known = bool(band.session)
+        band.resumed = band.resumed or known or followed
         start = band.acknowledged if self._hold and known else self._end
         band.first_missed += start - band.acknowledged if known else 0
         band.session, band.cursor, band.acknowledged = session, start, start
@@ -113,6 +122,7 @@ class HopRing:
         if not band.session or band.cursor >= self._end or len(band.given) >= self._window(band):
             return None
         missed, band.first_missed = band.first_missed, 0
+        resumed, band.resumed = band.resumed, False
         if band.cursor < self._first:  # behind the ring: the newest hop, then those that follow in a row
             missed += self._end - 1 - band.cursor
             band.cursor = self._end - 1
@@ -121,7 +131,7 @@ class HopRing:
         band.waiting = ()
         band.given.append(band.cursor)
         band.cursor += 1
-        return Given(hop, notes, missed)
+        return Given(hop, notes, missed, resumed)
 
     def _window(self, band: _Band) -> int:
         if self._hold:

@@ -66,6 +66,7 @@ def encode_given(given: Given) -> list[Any]:
         "shape": list(hop.samples.shape),
         "received_ns": hop.received_ns,
         "missed": given.missed,
+        "resumed": given.resumed,
         "notes": [_note_plain(note) for note in given.notes],
     }
     arrays = (hop.samples, hop.times, hop.bad, hop.clipped)
@@ -89,7 +90,7 @@ def decode_given(parts: Sequence[bytes | memoryview]) -> Given | Welcome:
             clipped=np.frombuffer(clipped, "<i4"),
             received_ns=head["received_ns"],
         )
-        return Given(hop, tuple(_note_from(plain) for plain in head["notes"]), head["missed"])
+        return Given(hop, tuple(_note_from(plain) for plain in head["notes"]), head["missed"], head["resumed"])
     except (ValueError, TypeError, KeyError, IndexError) as error:
         raise WireError("stream", f"a hop cannot be read: {error!r}") from error
 
