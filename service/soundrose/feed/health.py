@@ -1,0 +1,204 @@
+"""core: the state of every hydrophone, judged once in each second of feed time.
+
+A second begins with the first sample and is followed by the next; it is divided into ten parts. Time is that of the
+samples, never the host's, so that a recording played fast is judged as it was live. Over a gap or a new run the second
+goes on; where more than it has passed, it is judged by what it has, and the next begins with the sample that came.
+
+States, the first that applies (`not judged` until the first second is over, and where a second has next to nothing):
+
+    excluded      left out by the settings
+    dead          no variation in the whole second, or no finite sample; and on from there until a clean second
+    clipped       more than CLIPPED_SHARE of the samples at full scale
+    intermittent  NaN or infinity, or no variation in some part of the second
+    good          none of these
+"""
+
+from collections.abc import Sequence
+from math import ceil
+from typing import Any, Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from soundrose.product.messages import LEVEL_FLOOR_DB, HealthProduct
+
+__all__ = ["CLIPPED_SHARE", "FLAT_SAMPLES", "PARTS", "SECOND_NS", "Health"]
+
+SECOND_NS: Final = 1_000_000_000
+PARTS: Final = 10  #: of a second; a hydrophone without variation in one of them is intermittent
+CLIPPED_SHARE: Final = 0.001  #: of the samples of a second: more than single clicks reach
+FLAT_SAMPLES: Final = 8  #: fewer equal values in a row are no sign of a dead hydrophone
+_NEARLY: Final = 0.01  #: samples; a block's t is rounded to whole nanoseconds, and must not move a boundary by one
+
+
+class Health:
+    """Judges hydrophones; is given the samples in order, in pieces that never reach over a part of a second.
+
+    Call `move` when the time of the next sample is not that after the last, `room` to learn how long the next piece
+    may be, `add` with the piece, `close` once the room is used up.
+
+    out : (channels,) bool, hydrophones out of use: excluded, or dead at the last judgement.
+    """
+
+    def __init__(self, channels: int, exclude: Sequence[int], rate_hz: float) -> None:
+        self._rate_hz = rate_hz
+        self._enough = max(rate_hz / PARTS, 1.0)  # samples that a second needs to be judged
+        self._excluded = np.zeros(channels, bool)
+        self._excluded[list(exclude)] = True
+        self._dead = np.zeros(channels, bool)
+        self.out = self._excluded.copy()
+        self._start: int | None = None  # of the second, ns
+        self.edge = 0  #: end of the current part, ns
+        self.last_t_ns = 0
+        self._power = np.zeros(channels)
+        self._finite, self._clipped = np.zeros(channels, np.int64), np.zeros(channels, np.int64)
+        self._flat_parts = np.zeros(channels, np.int64)
+        self._second, self._part = _Range(channels), _Range(channels)
+        self._samples = 0
+
+    @property
+    def dead(self) -> NDArray[np.bool_]:
+        """(channels,) bool, dead at the last judgement."""
+        return self._dead.copy()
+
+    def resume(self, dead: NDArray[np.bool_]) -> None:
+        """Go on with what was judged dead before a restart."""
+        self._dead = dead.copy()
+        self.out = self._excluded | dead
+
+    def is_apart(self, t_ns: int) -> bool:
+        """Whether a sample at `t_ns` lies outside the current part, so that `move` must be called."""
+        return self._start is None or t_ns >= self.edge or t_ns < self._start - SECOND_NS
+
+    def move(self, t_ns: int) -> HealthProduct | None:
+        """Make the part that holds `t_ns` the current one; the judgement of the second, if that is over with it."""
+        product = None
+        if self._start is not None and self._start - SECOND_NS <= t_ns < self._start + SECOND_NS:
+            self._close_part()
+        else:
+            product = self._judge()
+            follows = self._start is not None and 0 <= t_ns - self._start < 2 * SECOND_NS
+            self._start = self._start + SECOND_NS if follows and self._start is not None else t_ns
+        assert self._start is not None
+        part = max((t_ns - self._start) * PARTS // SECOND_NS, 0)
+        self.edge = self._start + (part + 1) * SECOND_NS // PARTS
+        return product
+
+    def room(self, t_ns: int) -> int:
+        """Samples from the one at `t_ns` on (it included) that still belong to the current part; at least 1."""
+        return max(ceil((self.edge - t_ns) * self._rate_hz / SECOND_NS - _NEARLY), 1)
+
+    def add(
+        self, samples: NDArray[np.float32], clipped: NDArray[np.int32], bad: NDArray[np.bool_] | None, last_t_ns: int
+    ) -> None:
+        """Take a piece.
+
+        samples : (channels, n) float32, n >= 1.  clipped : (channels,) how many of them are clipped.  bad :
+        (channels,) bool, hydrophones whose samples here are no readings.  last_t_ns : time of the last one.
+        """
+        power = np.einsum("ij,ij->i", samples, samples, dtype=np.float64)
+        self.last_t_ns = last_t_ns
+        self._samples += samples.shape[1]
+        self._power += power
+        self._clipped += clipped
+        self._finite += samples.shape[1] if bad is None else np.where(bad, 0, samples.shape[1])
+        self._part.add(samples, bad)
+
+    def close(self) -> HealthProduct | None:
+        """End the current part; the judgement of the second, if this was its last part."""
+        assert self._start is not None
+        if self.edge < self._start + SECOND_NS:
+            self._close_part()
+            self.edge += SECOND_NS // PARTS
+            return None
+        product = self._judge()
+        self._start += SECOND_NS
+        self.edge = self._start + SECOND_NS // PARTS
+        return product
+
+    def _close_part(self) -> None:
+        self._flat_parts += self._part.is_flat()
+        self._second.join(self._part)
+        self._part.clear()
+
+    def _judge(self) -> HealthProduct | None:
+        self._close_part()
+        product = None
+        if self._samples >= self._enough:
+            product = self._product()
+        self._power[:], self._finite[:], self._clipped[:], self._flat_parts[:] = 0.0, 0, 0, 0
+        self._second.clear()
+        self._samples = 0
+        return product
+
+    def _product(self) -> HealthProduct:
+        flat = (self._second.is_flat() | (self._finite == 0)) & ~self._excluded
+        torn = (self._finite < self._samples) | (self._flat_parts > 0)
+        self._dead = flat | (self._dead & torn)
+        self.out = self._excluded | self._dead
+        channels = [self._channel(i) for i in range(len(self.out))]
+        header = {"t": self.last_t_ns, "used": int(np.count_nonzero(~self.out)), "channels": channels}
+        return HealthProduct(header)
+
+    def _channel(self, i: int) -> dict[str, Any]:
+        finite = int(self._finite[i])
+        mean = float(self._power[i]) / finite if finite else 0.0
+        level_db = max(10.0 * float(np.log10(mean)), LEVEL_FLOOR_DB) if mean > 0 else LEVEL_FLOOR_DB
+        state, why = self._state(i, finite)
+        return {"i": i, "state": state, "level_db": round(level_db, 3), "why": why}
+
+    def _state(self, i: int, finite: int) -> tuple[str, str]:
+        share = float(self._clipped[i]) / self._samples
+        if self._excluded[i]:
+            return "excluded", "left out by the settings (array.exclude)"
+        if self._dead[i]:
+            if not finite:
+                return "dead", "no finite sample in the second"
+            if self._second.is_flat()[i]:
+                return "dead", f"no variation: every sample reads {self._second.low[i]:.6g} µPa"
+            return "dead", f"was dead, and is back after one clean second; {self._torn(i, finite)}"
+        if share > CLIPPED_SHARE:
+            return (
+                "clipped",
+                f"{100 * share:.3g} % of the samples at full scale; up to {100 * CLIPPED_SHARE:g} % is good",
+            )
+        if finite < self._samples or self._flat_parts[i]:
+            return "intermittent", self._torn(i, finite)
+        return "good", ""
+
+    def _torn(self, i: int, finite: int) -> str:
+        if finite < self._samples:
+            return f"NaN or infinity in {100 * (1 - finite / self._samples):.3g} % of the second"
+        return f"no variation in {self._flat_parts[i]} of {PARTS} parts of the second"
+
+
+class _Range:
+    """Lowest and highest value per channel, and how many were seen."""
+
+    def __init__(self, channels: int) -> None:
+        self.low, self.high = np.empty(channels, np.float32), np.empty(channels, np.float32)
+        self.seen = np.empty(channels, np.int64)
+        self.clear()
+
+    def clear(self) -> None:
+        self.low[:], self.high[:], self.seen[:] = np.inf, -np.inf, 0
+
+    def add(self, samples: NDArray[np.float32], bad: NDArray[np.bool_] | None) -> None:
+        low, high, seen = samples.min(axis=1), samples.max(axis=1), samples.shape[1]
+        if bad is not None:
+            low, high = np.where(bad, np.float32(np.inf), low), np.where(bad, np.float32(-np.inf), high)
+            self.seen += np.where(bad, 0, seen)
+        else:
+            self.seen += seen
+        np.minimum(self.low, low, out=self.low)
+        np.maximum(self.high, high, out=self.high)
+
+    def join(self, other: "_Range") -> None:
+        np.minimum(self.low, other.low, out=self.low)
+        np.maximum(self.high, other.high, out=self.high)
+        self.seen += other.seen
+
+    def is_flat(self) -> NDArray[np.bool_]:
+        """(channels,) bool: enough values, and all of them equal."""
+        flat: NDArray[np.bool_] = (self.seen >= FLAT_SAMPLES) & (self.low == self.high)
+        return flat

@@ -1,0 +1,94 @@
+"""codec: what a restarted ingest goes on from, as few bytes: run, index, counters, the dead, the notes in force.
+
+Two msgpack values one after the other: the count, which changes with every message, and the rest, which seldom does
+and is therefore kept packed. Written and read by this program alone, under a version of its own.
+"""
+
+from collections.abc import Sequence
+from dataclasses import asdict, fields
+from typing import Any, Final
+
+import msgpack
+import numpy as np
+from numpy.typing import NDArray
+
+from soundrose.errors import UsageError
+from soundrose.feed.hop import Navigation, Note, Positions
+from soundrose.feed.sequence import Candidate, Counters, RunState
+from soundrose.feed.wire import REASONS
+
+__all__ = ["SNAPSHOT_LIMIT", "pack_count", "pack_rest", "snapshot_facts", "unpack_snapshot"]
+
+SNAPSHOT_LIMIT: Final = 60 * 1024  #: bytes; a snapshot is never larger
+_REST_LIMIT: Final = 44 * 1024  #: bytes of the rest; beyond it the notes are left out, and come again from the source
+_VERSION: Final = 1
+_COUNTED: Final = tuple(f.name for f in fields(Counters))
+_PACKER: Final = msgpack.Packer()
+
+
+def pack_count(state: RunState, counters: Counters) -> bytes:
+    """The part that changes with every message."""
+    return bytes(_PACKER.pack((
+        _VERSION, state.running, state.run, state.epoch, state.next, state.first, state.t_ns, state.stretch,
+        state.ended, state.replaced, state.candidate,
+        counters.blocks, counters.samples, counters.gaps, counters.lost_samples, counters.trimmed_samples,
+        counters.unused_samples, counters.restarts, counters.clock_jumps, counters.late,
+        list(counters.dropped.values()),
+    )))  # fmt: skip
+
+
+def pack_rest(dead: NDArray[np.bool_], notes: Sequence[Note]) -> bytes:
+    """The part that seldom changes. dead : (channels,) bool."""
+    mask = np.packbits(dead).tobytes()
+    rest = bytes(_PACKER.pack((mask, [plain for plain in map(_plain, notes) if plain])))
+    return rest if len(rest) <= _REST_LIMIT else bytes(_PACKER.pack((mask, [])))
+
+
+def _plain(note: Note) -> tuple[Any, ...]:
+    if isinstance(note, Positions):
+        return ("positions", note.t_ns, note.positions_m.astype("<f8").tobytes())
+    if isinstance(note, Navigation):
+        speed = note.values["sound_speed_m_s"]
+        return ("sound speed", note.t_ns, note.of, speed)
+    return ()
+
+
+def unpack_snapshot(snapshot: bytes, channels: int) -> tuple[RunState, Counters, NDArray[np.bool_], list[Note]]:
+    """State, counters, the dead (channels,) and the notes in force. UsageError if it is not a snapshot."""
+    try:
+        unpacker = msgpack.Unpacker(use_list=False)
+        unpacker.feed(snapshot)
+        count, (mask, notes) = unpacker.unpack(), unpacker.unpack()
+        version, running, run, epoch, following, first, t_ns, stretch, ended, replaced, candidate, *counts = count
+        if version != _VERSION:
+            raise UsageError(f"the snapshot has version {version!r}; this program reads {_VERSION}")
+        state = RunState(
+            running, run, epoch, following, first, t_ns, stretch, ended, replaced,
+            Candidate(*candidate) if candidate else None,
+        )  # fmt: skip
+        counters = Counters(**dict(zip(_COUNTED, counts, strict=True)))
+        counters.dropped = dict(zip(REASONS, counts[-1], strict=True))
+        dead = np.unpackbits(np.frombuffer(mask, np.uint8), count=channels).astype(bool)
+        return state, counters, dead, [_note(note) for note in notes]
+    except (ValueError, TypeError, LookupError, msgpack.UnpackException) as error:
+        if isinstance(error, UsageError):
+            raise
+        raise UsageError(f"not a snapshot of {len(snapshot)} bytes ({error}); start without it") from None
+
+
+def snapshot_facts(snapshot: bytes) -> dict[str, Any]:
+    """Of a snapshot what the status message says: `run` and `next` (None while waiting), every counter.
+
+    An empty snapshot is that of a feed that has not begun. UsageError if it is not a snapshot.
+    """
+    state, counters = RunState(), Counters()
+    if snapshot:
+        state, counters, _, _ = unpack_snapshot(snapshot, 0)
+    run, following = (state.run, state.next) if state.running else (None, None)
+    return {"run": run, "next": following, **asdict(counters)}
+
+
+def _note(plain: tuple[Any, ...]) -> Note:
+    if plain[0] == "positions":
+        return Positions(plain[1], np.frombuffer(plain[2], "<f8").reshape(-1, 3))
+    return Navigation(plain[1], plain[2], {"sound_speed_m_s": plain[3]})
