@@ -76,7 +76,7 @@ def kill_and_wait(listener: Listener, name: str) -> tuple[dict, dict]:
 
 def test_ingest_takes_up_run_index_and_counters(joined: Joined) -> None:
     """All that was sent had been counted before: the run goes on without a gap and without losing a sample."""
-    service, listener, source = joined
+    _, listener, source = joined
     count = len(listener.of("map/main"))
     kill_and_wait(listener, "ingest")
     source.send(30)

@@ -185,5 +185,5 @@ def test_share_of_clipped_samples_is_told(ill: tuple[list[Message], list[Message
     """One of 32 hydrophones clips all the time: a share of 1/32, or none where it was left out."""
     maps, _ = ill
     assert maps[0].header["limits"]["clipped"] == 0.0
-    young = [m for m in maps if m.header["t"] >= START + 10 * SECOND][0]
+    young = next(m for m in maps if m.header["t"] >= START + 10 * SECOND)
     assert young.header["limits"]["clipped"] == pytest.approx(1 / 32, rel=0.05)
