@@ -11,11 +11,11 @@ from typing import Any, TextIO
 
 import msgpack
 import zmq
-from soundrose.feed.intake import snapshot_facts
 
 from soundrose.child import Orders, new_start, set_up_logging
 from soundrose.children import Child
 from soundrose.errors import StartError
+from soundrose.feed.intake import snapshot_facts
 from soundrose.feed.record import SharedRecord, make_record_file
 from soundrose.notify import Systemd
 from soundrose.product.codec import Envelope

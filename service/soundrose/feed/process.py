@@ -113,7 +113,7 @@ class IngestProcess:
                 return
 
     def _take_message(self, parts: list[memoryview]) -> None:
-        dropped = self._intake.counters.dropped_total
+        before = self._intake.last_drop
         for outcome in self._intake.push(parts, time.monotonic_ns()):
             match outcome:
                 case Hop():
@@ -125,8 +125,8 @@ class IngestProcess:
                 case _:
                     self._ring.add_note(outcome)
         self._record.write(self._intake.snapshot())
-        if self._intake.counters.dropped_total != dropped and self._intake.last_drop is not None:
-            reason, detail = self._intake.last_drop
+        if (drop := self._intake.last_drop) is not None and drop is not before:
+            reason, detail = drop
             self._log.warn(reason, f"feed message dropped as {reason}: {detail}")
 
     def _take_reports(self) -> None:
