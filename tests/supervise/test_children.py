@@ -5,6 +5,7 @@ import sys
 import time
 
 import pytest
+
 from soundrose import children
 from soundrose.children import Child, back_off_s
 

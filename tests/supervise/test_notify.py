@@ -3,6 +3,7 @@
 import socket
 
 import pytest
+
 from soundrose.notify import Systemd
 
 

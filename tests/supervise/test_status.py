@@ -1,6 +1,7 @@
 """The status message: states of the feed, figures of bands over restarts."""
 
 import pytest
+
 from soundrose.status import BandBook, FeedWatch, status_header
 
 
