@@ -1,7 +1,5 @@
 """Hammer shots on a line of 24 geophones, real records: sign and slowness of the arrival through the whole service."""
 
-from collections.abc import Iterator
-
 import numpy as np
 import pytest
 from field_line import AVERAGE_SLOWNESS_MS_M, SHOTS, STEERING_M_S, shares, shot_maps
@@ -10,8 +8,8 @@ from rig.field_records import read_record, read_seg2
 
 
 @pytest.fixture(scope="module")
-def maps(tmp_path_factory: pytest.TempPathFactory) -> Iterator[dict[int, Message]]:
-    yield shot_maps(tmp_path_factory.mktemp("line"))
+def maps(tmp_path_factory: pytest.TempPathFactory) -> dict[int, Message]:
+    return shot_maps(tmp_path_factory.mktemp("line"))
 
 
 @pytest.mark.parametrize(("number", "source_m"), [(2002, -4.0), (2003, 46.0), (2004, 96.0), (2005, 112.0)])

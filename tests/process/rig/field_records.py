@@ -1,4 +1,4 @@
-"""Real line records, fetched by name when asked for: 24 geophones, hammer shots at known places; never kept in the repo.
+"""Real line records, fetched by name when asked for: 24 geophones, hammer shots at known places; never committed.
 
 Source: the example data of the package `refrapy` 0.2.4.1 (MIT licence, package-wide; no separate data licence). Only
 its data files are read, out of the wheel; the package is neither installed nor imported. Format SEG-2: Pullan 1990,
