@@ -1,7 +1,7 @@
 """core: the rolling average of frames: weights, how many independent averages it is worth, and levels."""
 
 from dataclasses import dataclass
-from math import exp, log
+from math import exp, expm1, log
 
 import numpy as np
 from numpy.typing import NDArray
@@ -30,8 +30,8 @@ class AverageStep:
 class RollingWeights:
     """Weights of an exponential average over frames, normalised from its start; no data in it.
 
-    Sums that are kept beside the content, all under the same decay: `total`, the weight so far (content / total is
-    the average), and the shares that `add_shares` is told of each frame.
+    `gain` is the weight of a frame when it enters. Sums kept under the same decay as the content: `total`, the weight
+    so far (content / total is the average), and the shares that `add_shares` is told of each frame.
 
     average_s : time constant; 0 = each frame alone.  hop : samples between adjacent frames.  rate_hz : nominal rate.
 
@@ -44,7 +44,7 @@ class RollingWeights:
 
     def __init__(self, average_s: float, hop: int, rate_hz: float) -> None:
         self._average_s, self._rate_hz = average_s, rate_hz
-        self._gain = 1.0 if average_s == 0 else -np.expm1(-hop / rate_hz / average_s)
+        self.gain = 1.0 if average_s == 0 else -expm1(-hop / rate_hz / average_s)
         self.restart()
 
     def restart(self) -> None:
@@ -59,16 +59,16 @@ class RollingWeights:
         adjacent : half a frame after it, so that the two overlap.
         """
         decay = 0.0 if elapsed is None else self._decay(elapsed)
-        self.total = decay * self.total + self._gain
-        self._squares = decay * decay * self._squares + self._gain**2
+        self.total = decay * self.total + self.gain
+        self._squares = decay * decay * self._squares + self.gain**2
         if adjacent:
-            self._squares += 2 * HANN_HALF_OVERLAP * decay * self._gain**2
+            self._squares += 2 * HANN_HALF_OVERLAP * decay * self.gain**2
         self._shares = (decay * self._shares[0], decay * self._shares[1])
-        return AverageStep(decay, self._gain)
+        return AverageStep(decay, self.gain)
 
     def add_shares(self, clipped: float, masked: float) -> None:
         """Shares (0..1) of the frame that has just entered: clipped samples, time under own pulses."""
-        self._shares = (self._shares[0] + self._gain * clipped, self._shares[1] + self._gain * masked)
+        self._shares = (self._shares[0] + self.gain * clipped, self._shares[1] + self.gain * masked)
 
     @property
     def clipped(self) -> float:

@@ -108,20 +108,23 @@ class Framer:
         self.gaps = 0
         self.unused_samples = 0
 
-    def push(self, hop: Hop, missed: int = 0) -> list[Frame]:
+    def push(self, hop: Hop, missed: int = 0, *, resumed: bool = False) -> list[Frame]:
         """Take one hop; return the frames that it completes, oldest first.
 
         missed : hops that this band did not get between the last one and this: a gap.
+        resumed : this process, or the one before it, was started anew within the run: a gap, whatever was lost.
         The frames' samples hold until the next push. Hops of one epoch must not go back (UsageError).
         """
         if hop.epoch != self._epoch:
+            new_run = self._epoch is not None
             self._start_epoch(hop)
+            if (missed or resumed) and not new_run:
+                self._mark_gap(hop.first)
         elif hop.first < self._end:
             raise UsageError(f"hop begins at sample {hop.first}; the epoch is at {self._end} already")
-        elif missed or hop.first != self._end:
+        elif missed or resumed or hop.first != self._end:
             self._start_stretch(hop.first)
-            self._gap_end = hop.first
-            self.gaps += 1
+            self._mark_gap(hop.first)
         self._append(hop)
         frames = []
         while self._starts and self._starts[0][0] + self._length <= self._end:
@@ -136,6 +139,10 @@ class Framer:
     def _start_epoch(self, hop: Hop) -> None:
         self._start_stretch(hop.first)
         self._epoch, self._last, self._gap_end = hop.epoch, None, None
+
+    def _mark_gap(self, end: int) -> None:
+        self._gap_end = end
+        self.gaps += 1
 
     def _start_stretch(self, first: int) -> None:
         framed = self._origin
