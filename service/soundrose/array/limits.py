@@ -1,7 +1,7 @@
 """core: what a line of hydrophones can and cannot do: widths, side lobes, images, gain, distance. Predicted, exact."""
 
 from dataclasses import dataclass
-from math import acos, ceil, degrees, log10, pi
+from math import acos, ceil, copysign, degrees, log10, pi
 
 import numpy as np
 from numpy.typing import NDArray
@@ -40,8 +40,13 @@ class Line:
 
     @property
     def length_m(self) -> float:
-        """Aperture along x: of all hydrophones, also those that weigh nothing."""
+        """Foremost to aftmost hydrophone along x, metres: of all, also those that weigh nothing."""
         return float(np.ptp(self.positions_m[:, 0]))
+
+    @property
+    def aperture_m(self) -> float:
+        """The length the line acts with: each hydrophone stands for one (mean) spacing, so N d for equal spacing."""
+        return self.length_m * len(self.weights) / max(1, len(self.weights) - 1)
 
     @property
     def transit_s(self) -> float:
@@ -59,7 +64,8 @@ class Line:
 
     def response(self, f_hz: float, beam_cos: float, cos: float | NDArray[np.float64]) -> NDArray[np.float64]:
         """Power that the beam to `beam_cos` reads of a plane wave of power 1 at `f_hz` from each `cos`."""
-        return self.pattern(f_hz * (np.asarray(cos, dtype=np.float64) - beam_cos) / self.sound_speed_m_s)
+        apart = np.asarray(cos, dtype=np.float64) - beam_cos
+        return self.pattern(np.asarray(f_hz / self.sound_speed_m_s * apart, dtype=np.float64))
 
     def fall_v(self, power: float) -> float | None:
         """The v at which the main lobe has fallen to `power` (0 < power < 1); None where it never does.
@@ -73,7 +79,7 @@ class Line:
             return None
         step = 1 / (POINTS * length)
         for lobe in range(8 * len(self.weights)):  # the main lobe is wide where the ends weigh next to nothing
-            v = step * np.arange(lobe * POINTS + 1, (lobe + 1) * POINTS + 1)
+            v = step * np.arange(lobe * POINTS + 1, (lobe + 1) * POINTS + 1, dtype=np.float64)
             under = np.flatnonzero(self.pattern(v) < power)
             if len(under):
                 high = v[under[0]]
@@ -142,8 +148,8 @@ class Line:
         return -10 * log10(float(self.weights @ self.weights))
 
     def far_field_m(self, f_hz: float, beam_cos: float) -> float:
-        """(L sin theta)^2 / lambda: nearer than this a contact is out of focus."""
-        return self.length_m**2 * (1 - beam_cos**2) * f_hz / self.sound_speed_m_s
+        """(L sin theta)^2 / lambda with L the aperture: nearer than this a contact is out of focus."""
+        return self.aperture_m**2 * (1 - beam_cos**2) * f_hz / self.sound_speed_m_s
 
     def focus_loss_db(self, f_hz: float, beam_cos: float, distance_m: float) -> float:
         """How much too low a beam reads a point source on its axis at `distance_m` from the line's middle, dB.
@@ -208,4 +214,5 @@ def image_cosines(spacing_m: float, sound_speed_m_s: float, f_hz: float, beam_co
     step = sound_speed_m_s / (f_hz * spacing_m)
     reach = ceil(2 / step) + 1
     near = (beam_cos + k * step for k in range(reach, -reach - 1, -1) if k)
-    return tuple(max(-1.0, min(1.0, u)) for u in near if abs(u) <= 1 + 1e-12)
+    # onto the axis where it is there but for rounding: 1e-16 in cosine is 1e-6 degrees at endfire
+    return tuple(copysign(1.0, u) if abs(u) > 1 - 1e-12 else u for u in near if abs(u) <= 1 + 1e-12)
