@@ -165,7 +165,7 @@ def test_check_prints_the_limits_of_the_array_as_tables(tmp_path: Path) -> None:
     ended = run_command("check", "aft.toml", cwd=tmp_path)
     assert ended.returncode == 0, ended.stderr
     text = ended.stdout.lower()
-    words = "transit, beamwidth, array gain, far, alias, scallop, resolution, memory, load, heard"
+    words = "transit time, width, gain, far field, alias onset, lost at, bins, frame, memory, load, heard"
     for word in words.split(", "):
         assert word in text, f"nothing about {word!r}"
     assert "low" in text

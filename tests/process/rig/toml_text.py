@@ -11,8 +11,10 @@ def _value(value: Any) -> str:
         return "true" if value else "false"
     if isinstance(value, str):
         return json.dumps(value)
-    if isinstance(value, int | float):
+    if isinstance(value, int):
         return repr(value)
+    if isinstance(value, float):
+        return repr(float(value))  # NumPy's floats are floats, but their repr is not TOML
     if isinstance(value, list | tuple):
         return "[" + ", ".join(_value(item) for item in value) + "]"
     raise TypeError(f"no TOML for {value!r}")
