@@ -7,7 +7,7 @@ import subprocess
 import sys
 import time
 from collections.abc import Mapping, Sequence
-from typing import IO, Any, Literal, cast
+from typing import Any, Literal
 
 from soundrose.child import Orders
 
@@ -119,7 +119,7 @@ class Child:
         """Ask it to end: its lifeline closes."""
         if self._process is not None and self._process.stdin is not None:
             with contextlib.suppress(OSError):
-                cast(IO[bytes], self._process.stdin).close()
+                self._process.stdin.close()
 
     def kill(self) -> None:
         """End it now, stopped or not, and take its exit status."""

@@ -136,7 +136,7 @@ class BandProcess:
         for note in given.notes:
             self._note(note)
         self._dropped_hops += given.missed
-        products = self._stage.push(given.hop, given.missed)
+        products = self._stage.push(given.hop, given.missed, resumed=given.resumed)
         for product in products:
             self._publish(product)
         self._times.hop(given.hop.length, time.perf_counter() - begun)
