@@ -30,6 +30,7 @@ _TICK_MS = 50
 _STATUS_S = 1.0
 _END_S = 4.0  #: contract: an orderly end within 5 s
 _PAUSE_S = 1.0  #: a turn longer than this: this process itself was held up, and no child is to blame
+_READERS = ("contacts", "serve")  #: subscribe to what is published, so they start once its address is known
 _GIVE_UP = 5  #: failures in a row of one child before the service was ever ready
 _log = logging.getLogger("soundrose")
 
@@ -52,7 +53,7 @@ class Supervisor:
         self._watch = FeedWatch()
         self._disconnects = self._disconnects_before = 0
         self._ending = False
-        self._ready = False
+        self._ready = self._published = False
         self._status_due = 0.0
         self._systemd = Systemd()
         self._turned = time.monotonic()
@@ -100,7 +101,7 @@ class Supervisor:
 
     def _start_due(self) -> None:
         for child in self._children.values():
-            if child.due:
+            if child.due and (child.name not in _READERS or self._published):
                 inherit = (self._record_fd,) if child.name == "ingest" else ()
                 child.start(self._orders(child.name), inherit)
                 self._status_due = 0.0
@@ -134,6 +135,7 @@ class Supervisor:
 
     def _learn(self, child: Child) -> None:
         """Endpoints with their ports filled in, counters, band figures."""
+        self._published = self._published or "publish" in child.facts
         for key in ("feed", "publish", "http"):
             if key in child.facts:
                 self._endpoints[key] = child.facts[key]
