@@ -110,7 +110,7 @@ def test_bearing_is_right_within_three_time_constants_and_a_frame(
     settled = leg_t(number) + (2 * SECOND if told else 0) + round(3 * AVERAGE_S * SECOND)
     settled += round(band["frame"] / 8000 * SECOND)
     found = [m for m in maps[band["name"]] if settled < m.header["t_end"] <= leg_t(number + 1)]
-    assert len(found) >= 3
+    assert len(found) >= 2
     for message in found:
         assert abs(error_cosine(message, band["name"], leg)) < 0.1, message.header["t_end"]
 

@@ -123,7 +123,8 @@ class Listener:
 
     def wait_count(self, topic: str, count: int, deadline_s: float = 30.0) -> list[Message]:
         """The messages of the topic once there are `count`."""
-        return self.wait(f"{count} messages on {topic}", lambda s: len(m := s.of(topic)) >= count and m, deadline_s)
+        self.wait(f"{count} messages on {topic}", lambda s: len(s.of(topic)) >= count, deadline_s)
+        return self.of(topic)
 
     def close(self) -> None:
         self._stop.set()
