@@ -174,7 +174,7 @@ class Line:
         return 2 if v is None else max(2, 1 + ceil(f_hz / self.sound_speed_m_s / v - 1e-9))
 
     def _weighted_length(self) -> float:
-        return float(np.ptp(self.positions_m[self.weights > 0, 0]))
+        return float(np.ptp(self.positions_m[self.weights != 0, 0]))
 
 
 def used_weights(settings: Settings, band: BandSettings) -> NDArray[np.float64]:
