@@ -147,6 +147,16 @@ def _whole(header: Mapping[str, Any], key: str, below: int) -> int:
     return value
 
 
+def _integers(header: Mapping[str, Any], key: str) -> list[int]:
+    value = header.get(key)
+    if type(value) is not list:
+        _bad_key(key, value, "a list of integers")
+    for n in value:
+        if type(n) is not int:
+            _bad_key(key, n, "a list of integers")
+    return value
+
+
 def _is_number(value: object) -> TypeGuard[int | float]:
     return type(value) is int or (type(value) is float and isfinite(value))
 
@@ -156,12 +166,10 @@ def _samples(header: Mapping[str, Any], data: Octets, expected: Expected) -> Sam
     run = _text(header, "run")
     first = _whole(header, "first", FIRST_LIMIT)
     t_ns = _whole(header, "t", TIME_LIMIT)
-    rate, shape, layout, kind, unit = get("rate"), get("shape"), get("layout"), get("type"), get("unit")
+    rate, layout, kind, unit = get("rate"), get("layout"), get("type"), get("unit")
     if not _is_number(rate):
         _bad_key("rate", rate, "a finite number")
-    for n in shape if type(shape) is list else (None,):
-        if type(n) is not int:
-            _bad_key("shape", shape, "a list of integers, [channels, samples]")
+    shape = _integers(header, "shape")
     if layout not in LAYOUTS:
         _bad_key("layout", layout, " or ".join(LAYOUTS))
     if type(kind) is not str:

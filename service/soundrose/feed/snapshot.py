@@ -23,12 +23,11 @@ SNAPSHOT_LIMIT: Final = 60 * 1024  #: bytes; a snapshot is never larger
 _REST_LIMIT: Final = 44 * 1024  #: bytes of the rest; beyond it the notes are left out, and come again from the source
 _VERSION: Final = 1
 _COUNTED: Final = tuple(f.name for f in fields(Counters))
-_PACKER: Final = msgpack.Packer()
 
 
 def pack_count(state: RunState, counters: Counters) -> bytes:
     """The part that changes with every message."""
-    return bytes(_PACKER.pack((
+    return bytes(msgpack.packb((
         _VERSION, state.running, state.run, state.epoch, state.next, state.first, state.t_ns, state.stretch,
         state.ended, state.replaced, state.candidate,
         counters.blocks, counters.samples, counters.gaps, counters.lost_samples, counters.trimmed_samples,
@@ -40,8 +39,8 @@ def pack_count(state: RunState, counters: Counters) -> bytes:
 def pack_rest(dead: NDArray[np.bool_], notes: Sequence[Note]) -> bytes:
     """The part that seldom changes. dead : (channels,) bool."""
     mask = np.packbits(dead).tobytes()
-    rest = bytes(_PACKER.pack((mask, [plain for plain in map(_plain, notes) if plain])))
-    return rest if len(rest) <= _REST_LIMIT else bytes(_PACKER.pack((mask, [])))
+    rest = bytes(msgpack.packb((mask, [plain for plain in map(_plain, notes) if plain])))
+    return rest if len(rest) <= _REST_LIMIT else bytes(msgpack.packb((mask, [])))
 
 
 def _plain(note: Note) -> tuple[Any, ...]:
