@@ -26,7 +26,14 @@ BANNED_IN_CORE = {
 #: a room imports only itself, what stands lower, and what stands under all
 ORDER = ["array", "feed", "beam", "contact", "pipeline", "scene", "serve", "supervise", "cli"]
 UNDER_ALL = {"errors", "_version", "settings_types", "settings", "product", "child", "store"}
-SAME_HEIGHT = {"children": "supervise", "status": "supervise", "worker": "supervise", "check": "cli", "bench": "cli"}
+SAME_HEIGHT = {
+    "children": "supervise",
+    "notify": "supervise",
+    "status": "supervise",
+    "worker": "supervise",
+    "check": "cli",
+    "bench": "cli",
+}
 
 
 def name(path: Path) -> str:
