@@ -17,6 +17,7 @@ from soundrose.settings_services import (
     check_endpoints,
     parse_detection,
     parse_feed,
+    parse_log,
     parse_publish,
     parse_serve,
     parse_store,
@@ -37,6 +38,7 @@ TABLES = (
     "publish",
     "serve",
     "store",
+    "log",
 )
 #: accepted, so that a file written for a later version loads; not used by this one
 RESERVED = ("access", "curve", "navigation", "zones", "vessel", "record")
@@ -70,6 +72,7 @@ def parse_settings(raw: Mapping[str, Any], base_dir: str | Path = ".", file_name
     detection = parse_detection(raw.get("detection", {}), notes)
     stream, publish = parse_stream(raw.get("stream", {}), notes), parse_publish(raw.get("publish", {}), notes)
     serve, store = parse_serve(raw.get("serve", {}), notes), parse_store(raw.get("store", {}), notes)
+    log = parse_log(raw.get("log", {}), notes)
     check_endpoints(feed, stream, publish, notes)
     for band in bands:
         if band.place == "elsewhere" and stream.bind.startswith("ipc://"):
@@ -79,7 +82,7 @@ def parse_settings(raw: Mapping[str, Any], base_dir: str | Path = ".", file_name
     if notes.problems or array is None or calibration is None or water is None:
         raise ConfigError(notes.problems)
     return Settings(
-        array, feed, calibration, water, bands, detection, stream, publish, serve, store, tuple(notes.warnings)
+        array, feed, calibration, water, bands, detection, stream, publish, serve, store, log, tuple(notes.warnings)
     )
 
 

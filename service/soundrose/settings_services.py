@@ -1,4 +1,4 @@
-"""core: the tables [feed], [detection], [stream], [publish], [serve] and [store] of the settings file."""
+"""core: the tables [feed], [detection], [stream], [publish], [serve], [store] and [log] of the settings file."""
 
 import re
 from typing import Any, cast, get_args
@@ -7,6 +7,8 @@ from soundrose.settings_reader import Notes, Table
 from soundrose.settings_types import (
     DetectionSettings,
     FeedSettings,
+    LogFormat,
+    LogSettings,
     Overload,
     PublishSettings,
     ServeSettings,
@@ -15,8 +17,8 @@ from soundrose.settings_types import (
 )
 
 __all__ = [
-    "check_endpoints", "endpoint_problem", "parse_detection", "parse_feed", "parse_publish", "parse_serve",
-    "parse_store", "parse_stream",
+    "check_endpoints", "endpoint_problem", "parse_detection", "parse_feed", "parse_log", "parse_publish",
+    "parse_serve", "parse_store", "parse_stream",
 ]  # fmt: skip
 
 #: bytes of a Unix socket's path, its closing zero taken off; '{pid}' may grow to 7 digits
@@ -56,7 +58,7 @@ def parse_detection(values: Any, notes: Notes) -> DetectionSettings:
 
 def parse_stream(values: Any, notes: Notes) -> StreamSettings:
     table, default = Table(values, "stream", notes), StreamSettings()
-    ends = {key: _endpoint(table, key, getattr(default, key)) for key in ("bind", "collect", "control")}
+    ends = {key: _endpoint(table, key, getattr(default, key)) for key in ("bind", "collect", "control", "commands")}
     table.close()
     return StreamSettings(**ends)
 
@@ -79,10 +81,23 @@ def parse_serve(values: Any, notes: Notes) -> ServeSettings:
 
 
 def parse_store(values: Any, notes: Notes) -> StoreSettings:
-    table = Table(values, "store", notes)
-    path = table.text("path", StoreSettings().path, "must be the path of a folder")
+    table, default = Table(values, "store", notes), StoreSettings()
+    path = table.text("path", default.path, "must be the path of a folder")
+    days = table.number(
+        "retain_days", default.retain_days, "must be a number of days above 0, at most 36500", above=0, high=36500
+    )
+    size = table.integer(
+        "retain_mb", default.retain_mb, "must be a whole number of megabytes from 1 to 1000000", low=1, high=10**6
+    )
     table.close()
-    return StoreSettings(path or StoreSettings().path)
+    return StoreSettings(path or default.path, days or default.retain_days, size or default.retain_mb)
+
+
+def parse_log(values: Any, notes: Notes) -> LogSettings:
+    table, default = Table(values, "log", notes), LogSettings()
+    form = table.word("format", default.format, get_args(LogFormat))
+    table.close()
+    return LogSettings(cast(LogFormat, form or default.format))
 
 
 def endpoint_problem(endpoint: str) -> str | None:
@@ -101,7 +116,7 @@ def check_endpoints(feed: FeedSettings, stream: StreamSettings, publish: Publish
     taken: dict[str, str] = {}
     ends = {
         "feed.bind": feed.bind, "publish.bind": publish.bind, "stream.bind": stream.bind,
-        "stream.collect": stream.collect, "stream.control": stream.control,
+        "stream.collect": stream.collect, "stream.control": stream.control, "stream.commands": stream.commands,
     }  # fmt: skip
     for where, endpoint in ends.items():
         if (

@@ -10,6 +10,8 @@ __all__ = [
     "DetectionSettings",
     "FeedSettings",
     "KernelChoice",
+    "LogFormat",
+    "LogSettings",
     "Overload",
     "Place",
     "PublishSettings",
@@ -25,6 +27,7 @@ ShadingName = Literal["uniform", "hann", "hamming", "chebyshev", "taylor"]
 Overload = Literal["drop", "hold"]
 Place = Literal["here", "elsewhere"]
 KernelChoice = Literal["auto", "pairs", "general"]
+LogFormat = Literal["text", "json"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -102,11 +105,13 @@ class DetectionSettings:
 
 @dataclass(frozen=True, slots=True)
 class StreamSettings:
-    """Endpoints inside the service: hops to bands, maps from bands to the proxy, heartbeats to the supervisor."""
+    """Endpoints inside the service: hops to bands, maps from bands to the proxy, heartbeats to the supervisor,
+    commands from serve to contacts."""
 
     bind: str = "ipc://@soundrose-{pid}-stream"
     collect: str = "ipc://@soundrose-{pid}-collect"
     control: str = "ipc://@soundrose-{pid}-control"
+    commands: str = "ipc://@soundrose-{pid}-commands"
 
 
 @dataclass(frozen=True, slots=True)
@@ -122,7 +127,18 @@ class ServeSettings:
 
 @dataclass(frozen=True, slots=True)
 class StoreSettings:
+    """path, folder; retain_days, retain_mb (10^6 bytes): older events are deleted, whichever is reached first."""
+
     path: str = "soundrose-data"
+    retain_days: float = 365.0
+    retain_mb: int = 1000
+
+
+@dataclass(frozen=True, slots=True)
+class LogSettings:
+    """format of the lines on standard error."""
+
+    format: LogFormat = "text"
 
 
 @dataclass(frozen=True, slots=True)
@@ -139,6 +155,7 @@ class Settings:
     publish: PublishSettings = PublishSettings()
     serve: ServeSettings = ServeSettings()
     store: StoreSettings = StoreSettings()
+    log: LogSettings = LogSettings()
     warnings: tuple[str, ...] = ()
 
     def band(self, name: str) -> BandSettings:
@@ -173,5 +190,6 @@ class Settings:
             publish=make(PublishSettings, plain["publish"]),
             serve=make(ServeSettings, plain["serve"]),
             store=make(StoreSettings, plain["store"]),
+            log=make(LogSettings, plain["log"]),
             warnings=tuples(plain["warnings"]),
         )
