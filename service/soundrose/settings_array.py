@@ -25,6 +25,8 @@ def parse_array(values: Any, notes: Notes, read_places: ReadPlaces) -> ArraySett
     None where the places are not known; other mistakes are in `notes`, and bands can still be read against the rest.
     """
     table = Table(values, "array", notes)
+    if not table.is_table:
+        return None
     name = table.text(
         "id", None, "must be a name of 1 to 64 printable characters without blanks at its ends",
         pattern=r"(?=\S)[^\x00-\x1f\x7f-\x9f]{1,64}(?<=\S)", required=True,

@@ -77,6 +77,8 @@ class _Band:
 
     def read(self) -> BandSettings | None:
         table, problems = self.table, len(self.table.notes.problems)
+        if not table.is_table:
+            return None
         name = table.text(
             "name", None, "must be a lower-case letter, then up to 31 of a-z, 0-9 and '-'",
             pattern=r"[a-z][a-z0-9-]{0,31}", required=True,
@@ -156,6 +158,7 @@ class _Band:
         lowest = 4 if taps is None else min_frame(taps)
         for_this = "" if taps is None else " for this array"
         if lowest > MAX_FRAME:
+            self.table.has("frame")
             self.table.notes.problem(
                 f"{self.table.where}.frame", f"this array takes a frame of {lowest}; the longest allowed is {MAX_FRAME}"
             )

@@ -31,12 +31,14 @@ class Table:
     """One table while it is read. Every getter returns a value that is right, or None after noting the mistake.
 
     A key that is not there yields its default and is no mistake, unless it is required. `close` notes keys that
-    nobody asked for. `has` tells whether the file gives the key at all.
+    nobody asked for. `has` tells whether the file gives the key at all. Where `values` is no table, that is noted and
+    `is_table` is False.
     """
 
     def __init__(self, values: Any, where: str, notes: Notes) -> None:
         self.where, self.notes = where, notes
-        if not isinstance(values, Mapping):
+        self.is_table = isinstance(values, Mapping)
+        if not self.is_table:
             notes.problem(where, f"got {shown(values)}; must be a table")
             values = {}
         self.values: Mapping[str, Any] = values
@@ -55,8 +57,13 @@ class Table:
         self.notes.problem(f"{self.where}.{key}", f"missing; {must}")
 
     def raw(self, key: str, default: Any, must: str, required: bool = False) -> Any:
-        """The value as it stands, the default, or None where it is required and missing."""
+        """The value as it stands, the default, or None where it is required and missing (noted, as is a null).
+
+        `must` is empty where the caller notes a value that is no such thing itself.
+        """
         if self.has(key):
+            if self.values[key] is None and must:  # TOML has no null, but a mapping made elsewhere may hold one
+                self.got(key, must)
             return self.values[key]
         if required:
             self.missing(key, must)
