@@ -5,7 +5,7 @@ import os
 import secrets
 import sqlite3
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any, Protocol
@@ -14,12 +14,13 @@ from soundrose.errors import StartError
 
 __all__ = [
     "APPLICATION_ID", "FILE_NAME", "MIGRATIONS", "VERSION", "Connection", "Damaged", "check_file", "connect_reader",
-    "connect_writer", "is_damage", "log_id", "migrate", "prepare_writer", "set_aside",
+    "connect_writer", "drop_oldest_aside", "is_damage", "log_id", "migrate", "prepare_writer", "set_aside",
 ]  # fmt: skip
 
 FILE_NAME = "events.sqlite"
 APPLICATION_ID = 0x534E4452  #: in the file's header, so that no other program's file is taken for a log
 CHECK_S = 2.0  #: the check of a large log ends here: a restart must not wait longer for it
+KEPT_ASIDE = 3  #: damaged logs kept beside the log: a failing disk must not be filled by them
 _BUSY_S = 2.0
 
 #: Step k brings a file of version k to k + 1. Steps are never edited, only added: files of every version are out there.
@@ -108,8 +109,8 @@ def check_file(connection: sqlite3.Connection, limit_s: float = CHECK_S) -> bool
     return True
 
 
-def migrate(connection: Connection, path: Path, new_id: Callable[[], str] = lambda: secrets.token_hex(8)) -> bool:
-    """Bring the file up to VERSION, each step whole or not at all. True if it was empty.
+def migrate(connection: Connection, path: Path) -> None:
+    """Bring the file up to VERSION, each step whole or not at all.
 
     Raises
     ------
@@ -131,10 +132,9 @@ def migrate(connection: Connection, path: Path, new_id: Callable[[], str] = lamb
             connection.execute(statement)
         if step == 0:
             connection.execute(f"PRAGMA application_id={APPLICATION_ID}")
-            connection.execute("INSERT INTO meta VALUES ('log', ?)", (new_id(),))
+            connection.execute("INSERT INTO meta VALUES ('log', ?)", (secrets.token_hex(8),))
         connection.execute(f"PRAGMA user_version={step + 1}")
         connection.execute("COMMIT")
-    return empty
 
 
 def log_id(connection: Connection) -> str:
@@ -154,3 +154,12 @@ def set_aside(path: Path, now_ns: int) -> Path:
         with contextlib.suppress(FileNotFoundError):
             os.replace(f"{path}{suffix}", f"{aside}{suffix}")
     return aside
+
+
+def drop_oldest_aside(path: Path, keep: int = KEPT_ASIDE) -> None:
+    """Delete all but the newest `keep` logs that were set aside."""
+    found = sorted(path.parent.glob(f"{path.stem}-damaged-*{path.suffix}"), key=lambda aside: aside.name)
+    for aside in found[:-keep]:
+        for suffix in ("", "-wal", "-shm"):
+            with contextlib.suppress(FileNotFoundError):
+                os.unlink(f"{aside}{suffix}")
