@@ -120,9 +120,11 @@ class Framer:
             self._start_epoch(hop)
             if (missed or resumed) and not new_run:
                 self._mark_gap(hop.first)
-        elif hop.first < self._end:
+        elif hop.first < self._end and not resumed:
             raise UsageError(f"hop begins at sample {hop.first}; the epoch is at {self._end} already")
         elif missed or resumed or hop.first != self._end:
+            if hop.first < self._end:  # another ingest took the run up earlier than this band had come
+                self._last = None
             self._start_stretch(hop.first)
             self._mark_gap(hop.first)
         self._append(hop)
