@@ -24,18 +24,18 @@ from rig import (
     tapered_weights,
 )  # fmt: skip
 
-ARRAY = ArrayModel()
-FRAME, HOP, BEAMS, MAP_BEAMS, AVERAGE_S = 2048, 1024, 2881, 97, 0.5
+ARRAY = ArrayModel(rate_hz=16_000.0, spacing_m=0.25)
+FRAME, HOP, BEAMS, MAP_BEAMS, AVERAGE_S = 2048, 1024, 4033, 97, 0.5  # about as much as a core does in real time
 WEIGHTS = tapered_weights(ARRAY.channels)
 PERIOD, BLOCK = 32_768, 1024
 SECOND = 10**9
 START = 1_796_133_600 * SECOND
-SEA = plane_wave(Wave(64.0, 100.0, (100.0, 3500.0)), ARRAY.positions_m, PERIOD, ARRAY.rate_hz)
+SEA = plane_wave(Wave(64.0, 100.0, (100.0, 7000.0)), ARRAY.positions_m, PERIOD, ARRAY.rate_hz)
 SEA += sensor_noise(ARRAY.channels, PERIOD, ARRAY.rate_hz, 75.0)
 DATA = [
     encode_samples(SEA[:, at : at + BLOCK] / ARRAY.full_scale_upa, "i2", "channel") for at in range(0, PERIOD, BLOCK)
 ]
-HEAVY = ARRAY.band(band_hz=[50.0, 3600.0], frame=FRAME, beams=BEAMS, shading=list(WEIGHTS), average_s=AVERAGE_S,
+HEAVY = ARRAY.band(band_hz=[50.0, 7200.0], frame=FRAME, beams=BEAMS, shading=list(WEIGHTS), average_s=AVERAGE_S,
                    map_beams=MAP_BEAMS)  # fmt: skip
 
 
@@ -67,7 +67,7 @@ def feed(feeder: Feeder, blocks: int, pace: float | None, sent: Sent) -> None:
 
 def speed_that_fits(folder: Path) -> float:
     """Times real time that the band works at when it is waited for, from its own maps."""
-    blocks = 120
+    blocks = 80
     with Service(ARRAY.settings(HEAVY), folder) as service, service.listener() as listener, service.feeder() as feeder:
         feed(feeder, blocks, None, Sent())
         maps = listener.wait_count("map/main", blocks - 1, 60)
@@ -121,7 +121,12 @@ def test_maps_missing_are_dropped_hops_and_gaps(outcome: Outcome) -> None:
 
 
 def test_at_least_a_quarter_of_the_maps_come(outcome: Outcome) -> None:
-    assert len(outcome.maps) >= outcome.expected / 4, f"{len(outcome.maps)} of {outcome.expected}"
+    """At three times what fits a third of the hops can be taken; three quarters of these must end a whole frame.
+
+    Judged by the hops that were taken, so that a machine busy with other things during this test does not decide.
+    """
+    taken = outcome.expected + 1 - outcome.band["dropped_hops"]
+    assert len(outcome.maps) >= 0.75 * taken, f"{len(outcome.maps)} maps of {taken} hops, {outcome.expected} sent"
 
 
 def test_maps_are_of_whole_frames_in_the_hops_that_came(outcome: Outcome) -> None:
@@ -131,7 +136,7 @@ def test_maps_are_of_whole_frames_in_the_hops_that_came(outcome: Outcome) -> Non
     steps = np.diff(firsts)
     assert (steps > 0).all()
     assert np.sum(steps > HOP) <= outcome.band["gaps"]
-    assert all(m.header["t_end"] - m.header["t"] == FRAME * SECOND // 8000 for m in outcome.maps)
+    assert all(m.header["t_end"] - m.header["t"] == FRAME * SECOND // 16_000 for m in outcome.maps)
 
 
 def first_samples(outcome: Outcome) -> list[int]:
@@ -139,16 +144,18 @@ def first_samples(outcome: Outcome) -> list[int]:
 
 
 def test_each_map_is_near_the_newest_sample(outcome: Outcome) -> None:
-    """1 s and a frame of feed time, at three times the pace that fits."""
+    """Nearly all within 1 s and a frame of feed time; every one within 1 s of host time, which is `pace` as much."""
     ages = [(outcome.sent.newest(m.came) - first - FRAME) / ARRAY.rate_hz
             for m, first in zip(outcome.maps, first_samples(outcome), strict=True)]  # fmt: skip
-    assert max(ages) <= 1.0 + FRAME / ARRAY.rate_hz, f"oldest {max(ages):.2f} s, median {np.median(ages):.2f} s"
+    told = f"oldest {max(ages):.2f} s, median {np.median(ages):.2f} s"
+    assert np.quantile(ages, 0.95) <= 1.0 + FRAME / ARRAY.rate_hz, told
+    assert max(ages) <= max(1.0, 3 * outcome.fits) + FRAME / ARRAY.rate_hz, told
 
 
 def test_maps_that_come_hold_what_their_hops_hold(outcome: Outcome) -> None:
     """Levels against float64 beams: content aged over what was missed, flagged as a gap while that is young."""
     firsts = first_samples(outcome)[:120]
-    exact = ExactMap(SEA * ARRAY.full_scale_upa, ARRAY.positions_m[:, 0], WEIGHTS, ARRAY.rate_hz, ARRAY.sound_speed_m_s)
+    exact = ExactMap(SEA, ARRAY.positions_m[:, 0], WEIGHTS, ARRAY.rate_hz, ARRAY.sound_speed_m_s)
     header = outcome.maps[0].header
     share = -(-BEAMS // MAP_BEAMS)
     grid = np.linspace(1, -1, BEAMS)

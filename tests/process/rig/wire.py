@@ -48,7 +48,7 @@ def cut_blocks(
         yield Block(first + at, part.shape[1], when, encode_samples(part, kind, layout))
 
 
-def block_message(array: Any, block: Block, run: str, **keys: Any) -> list[bytes]:
+def block_message(array: Any, block: Block, run: str, /, **keys: Any) -> list[bytes]:
     """Both frames of a `samples` message of the array model `array`; keys override those of the header."""
     header = {
         "v": 1, "kind": "samples", "array": array.name, "run": run, "first": block.first, "t": block.t,
@@ -58,7 +58,7 @@ def block_message(array: Any, block: Block, run: str, **keys: Any) -> list[bytes
     return [msgpack.packb(header | keys), block.data]
 
 
-def note(array: Any, kind: str, **keys: Any) -> list[bytes]:
+def note(array: Any, kind: str, /, **keys: Any) -> list[bytes]:
     """The one frame of a navigation, positions, pulse or end message."""
     return [msgpack.packb({"v": 1, "kind": kind, "array": array.name} | keys)]
 
