@@ -12,7 +12,7 @@ FORMS = [(kind, layout) for kind in ("i2", "i3", "i4", "f4") for layout in ("cha
 
 
 def plain_model(blocks, hop):
-    """(hops as lists of indices, gaps, lost, trimmed): the rules for going on, gap, overlap and repeat, list by list."""
+    """(hops as lists of indices, counters): the rules for going on, gap, overlap and repeat, list by list."""
     stretches, gaps, lost, trimmed, repeats, expected = [[]], 0, 0, 0, 0, None
     for first, samples in blocks:
         indices = list(range(first, first + samples))

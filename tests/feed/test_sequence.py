@@ -270,6 +270,23 @@ def test_run_replaced_may_come_back_when_its_successor_has_ended(source):
     assert (source.intake.run, source.intake.state) == ("a", "running")
 
 
+def test_run_ended_longer_ago_is_any_other(source):
+    source.send(encode_end("aft", "a"))
+    source.block(0, 100, run="b", t=source.t(1000))
+    source.send(encode_end("aft", "b"))
+    source.block(0, 100)
+    assert (source.intake.run, source.counts()["blocks"]) == ("a", 4)
+
+
+def test_run_begun_anew_and_then_replaced_is_old_however_late(source):
+    source.send(encode_end("aft", "a"))
+    source.block(200, 100)
+    source.block(0, 100, run="b", t=source.t(1000))
+    source.block(300, 100, t=source.t(2000))
+    assert source.counts()["old_run"] == 1
+    assert source.intake.run == "b"
+
+
 def test_names_of_any_length_are_told_apart(source_for):
     source, long = source_for(), "x" * 60_000
     source.block(0, 100, run=long)

@@ -1,6 +1,7 @@
 """core: the state of every hydrophone, judged once in each second of feed time.
 
-A second begins with the first sample and is followed by the next; it is divided into ten parts. Time is that of the
+A second begins with the first sample and is followed by the next; it is divided into ten parts (fewer at rates at
+which a part would not hold enough samples to tell). Time is that of the
 samples, never the host's, so that a recording played fast is judged as it was live. Over a gap or a new run the second
 goes on; where more than it has passed, it is judged by what it has, and the next begins with the sample that came.
 
@@ -25,7 +26,7 @@ from soundrose.product.messages import LEVEL_FLOOR_DB, HealthProduct
 __all__ = ["CLIPPED_SHARE", "FLAT_SAMPLES", "PARTS", "SECOND_NS", "Health"]
 
 SECOND_NS: Final = 1_000_000_000
-PARTS: Final = 10  #: of a second; a hydrophone without variation in one of them is intermittent
+PARTS: Final = 10  #: of a second, at most; a hydrophone without variation in one of them is intermittent
 CLIPPED_SHARE: Final = 0.001  #: of the samples of a second: more than single clicks reach
 FLAT_SAMPLES: Final = 8  #: fewer equal values in a row are no sign of a dead hydrophone
 _NEARLY: Final = 0.01  #: samples; a block's t is rounded to whole nanoseconds, and must not move a boundary by one
@@ -42,12 +43,14 @@ class Health:
 
     def __init__(self, channels: int, exclude: Sequence[int], rate_hz: float) -> None:
         self._rate_hz = rate_hz
-        self._enough = max(rate_hz / PARTS, 1.0)  # samples that a second needs to be judged
+        self._parts = max(min(int(rate_hz / FLAT_SAMPLES), PARTS), 1)
+        self._enough = max(rate_hz / self._parts, 1.0)  # samples that a second needs to be judged
         self._excluded = np.zeros(channels, bool)
         self._excluded[list(exclude)] = True
         self._dead = np.zeros(channels, bool)
         self.out = self._excluded.copy()
         self._start: int | None = None  # of the second, ns
+        self._part_i = 0
         self.edge = 0  #: end of the current part, ns
         self.last_t_ns = 0
         self._power = np.zeros(channels)
@@ -80,8 +83,7 @@ class Health:
             follows = self._start is not None and 0 <= t_ns - self._start < 2 * SECOND_NS
             self._start = self._start + SECOND_NS if follows and self._start is not None else t_ns
         assert self._start is not None
-        part = max((t_ns - self._start) * PARTS // SECOND_NS, 0)
-        self.edge = self._start + (part + 1) * SECOND_NS // PARTS
+        self._begin_part(max((t_ns - self._start) * self._parts // SECOND_NS, 0))
         return product
 
     def room(self, t_ns: int) -> int:
@@ -107,14 +109,19 @@ class Health:
     def close(self) -> HealthProduct | None:
         """End the current part; the judgement of the second, if this was its last part."""
         assert self._start is not None
-        if self.edge < self._start + SECOND_NS:
+        if self._part_i + 1 < self._parts:
             self._close_part()
-            self.edge += SECOND_NS // PARTS
+            self._begin_part(self._part_i + 1)
             return None
         product = self._judge()
         self._start += SECOND_NS
-        self.edge = self._start + SECOND_NS // PARTS
+        self._begin_part(0)
         return product
+
+    def _begin_part(self, part_i: int) -> None:
+        assert self._start is not None
+        self._part_i = part_i
+        self.edge = self._start + (part_i + 1) * SECOND_NS // self._parts
 
     def _close_part(self) -> None:
         self._flat_parts += self._part.is_flat()
@@ -169,7 +176,7 @@ class Health:
     def _torn(self, i: int, finite: int) -> str:
         if finite < self._samples:
             return f"NaN or infinity in {100 * (1 - finite / self._samples):.3g} % of the second"
-        return f"no variation in {self._flat_parts[i]} of {PARTS} parts of the second"
+        return f"no variation in {self._flat_parts[i]} of {self._parts} parts of the second"
 
 
 class _Range:

@@ -172,7 +172,7 @@ class Intake:
         completed = (starts.completed_t_ns for starts in self._starts)
         if any(t_ns is not None and t_ns >= note.t_ns for t_ns in completed):
             self.counters.late += 1
-        if self._notes.add(note, self._state.t_ns):
+        if self._notes.add(note, self._runs.newest_t_ns):
             self._rest = self._packed_rest()
         return [note]
 

@@ -137,6 +137,12 @@ class Runs:
         self._rate_hz, self._period_ns = rate_hz, 1e9 / rate_hz
         self._frames, self.counters, self.state = tuple(frames), counters, state
 
+    @property
+    def newest_t_ns(self) -> int:
+        """Time of the newest sample taken, -1 before the first."""
+        state = self.state
+        return state.t_ns + round(max(state.next - 1 - state.first, 0) * self._period_ns)
+
     def block(self, run: str, first: int, samples: int, t_ns: int) -> Verdict:
         """Judge one valid block of `samples` instants; if it is taken, `state` stands after it."""
         state, name = self.state, _short(run)
