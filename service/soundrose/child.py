@@ -2,6 +2,7 @@
 
 import contextlib
 import ctypes
+import json
 import logging
 import os
 import secrets
@@ -11,13 +12,14 @@ import threading
 import time
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from datetime import UTC, datetime
 from typing import Any
 
 import msgpack
 import zmq
 from threadpoolctl import threadpool_limits
 
-from soundrose.settings_types import Settings
+from soundrose.settings_types import LogFormat, Settings
 
 __all__ = ["HEARTBEAT_S", "Heartbeat", "Lifeline", "Orders", "SlowLog", "new_start", "set_up_child", "set_up_logging"]
 
@@ -146,7 +148,27 @@ def new_start() -> str:
     return secrets.token_hex(8)
 
 
-def set_up_logging(name: str) -> None:
+class _JsonLines(logging.Formatter):
+    """One JSON object per line: time (RFC 3339 UTC), process, level, text, and the trace of an exception."""
+
+    def __init__(self, process: str) -> None:
+        super().__init__()
+        self._process = process
+
+    def format(self, record: logging.LogRecord) -> str:
+        moment = datetime.fromtimestamp(record.created, UTC).isoformat(timespec="microseconds")
+        line = {
+            "time": moment.replace("+00:00", "Z"),
+            "process": self._process,
+            "level": record.levelname.lower(),
+            "text": record.getMessage(),
+        }
+        if record.exc_info:
+            line["trace"] = self.formatException(record.exc_info)
+        return json.dumps(line, ensure_ascii=False)
+
+
+def set_up_logging(name: str, form: LogFormat = "text") -> None:
     """Log lines to standard error: time, process, level, text."""
     logging.basicConfig(
         level=logging.INFO,
@@ -155,10 +177,13 @@ def set_up_logging(name: str) -> None:
         datefmt="%Y-%m-%dT%H:%M:%S%z",
         force=True,
     )
+    if form == "json":
+        for handler in logging.getLogger().handlers:
+            handler.setFormatter(_JsonLines(name))
 
 
 def set_up_child(orders: Orders) -> Lifeline:
     """Logging, one BLAS thread, lifeline: what comes first in every child."""
-    set_up_logging(orders.name)
+    set_up_logging(orders.name, orders.settings.log.format)
     threadpool_limits(1)  # small batched products: more threads were up to 700 times slower
     return Lifeline(orders.parent)

@@ -46,7 +46,7 @@ class Supervisor:
         self._record_fd = make_record_file()
         self._record = SharedRecord(self._record_fd)
         self._bands_here = [band for band in settings.bands if band.place == "here"]
-        names = ["proxy", "ingest", *(f"band:{band.name}" for band in self._bands_here), "serve"]
+        names = ["proxy", "ingest", *(f"band:{band.name}" for band in self._bands_here), "contacts", "serve"]
         self._children = {name: Child(name) for name in names}
         self._books = {band.name: BandBook() for band in settings.bands}
         self._elsewhere = {f"band:{band.name}": 0.0 for band in settings.bands if band.place == "elsewhere"}
@@ -175,6 +175,7 @@ class Supervisor:
     def _status(self, now: float) -> dict[str, Any]:
         feed = snapshot_facts(self._record.read())
         feed["disconnects"] = self._disconnects_before + self._disconnects
+        feed["log"] = self._children["contacts"].facts.get("log")
         state = self._watch.state(feed["run"], feed["blocks"], now)
         bands = {
             band.name: self._books[band.name].entry(
@@ -235,7 +236,7 @@ class Supervisor:
         """The feed's end first, so that what was taken is worked off; then all others; then by force."""
         deadline = time.monotonic() + _END_S
         bands = [name for name in self._children if name.startswith("band:")]
-        for names, share_s in ((["ingest"], 1.0), (bands, 1.5), (["serve", "proxy"], _END_S)):
+        for names, share_s in ((["ingest"], 1.0), (bands, 1.5), (["contacts"], 1.5), (["serve", "proxy"], _END_S)):
             until = min(deadline, time.monotonic() + share_s)
             for name in names:
                 self._children[name].let_go()
@@ -255,6 +256,7 @@ def _endpoints(settings: Settings) -> dict[str, str]:
         "stream": settings.stream.bind,
         "collect": settings.stream.collect,
         "control": settings.stream.control,
+        "commands": settings.stream.commands,
     }
     return {
         **{key: value.replace("{pid}", pid) for key, value in inside.items()},
@@ -278,7 +280,7 @@ def _check_store(path: str) -> None:
 
 def run_service(settings: Settings, out: TextIO) -> int:
     """Run the whole service. Returns the exit status; raises StartError (exit status 3)."""
-    set_up_logging("run")
+    set_up_logging("run", settings.log.format)
     for warning in settings.warnings:
         _log.warning("%s", warning)
     _check_store(settings.store.path)

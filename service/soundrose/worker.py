@@ -30,6 +30,8 @@ def _entry(name: str) -> Callable[[Orders], int]:
             from soundrose.feed.process import main
         case "band":
             from soundrose.beam.process import main
+        case "contacts":
+            from soundrose.contact.process import main
         case "serve":
             from soundrose.serve.process import main
         case _:

@@ -12,21 +12,15 @@ import zmq.asyncio
 
 from soundrose.child import HEARTBEAT_S, Heartbeat, Lifeline, Orders, SlowLog, set_up_child
 from soundrose.errors import StartError, WireError
+from soundrose.product.addresses import connect_address
 from soundrose.product.codec import decode_published
 from soundrose.serve.app import Source, make_app
 from soundrose.serve.guard import Guard, host_names
 from soundrose.serve.latest import Latest, Message, not_ready
 
-__all__ = ["connect_address", "listen", "main"]
+__all__ = ["listen", "main"]
 
 _GRACE_S = 1
-
-
-def connect_address(endpoint: str) -> str:
-    """Where to connect to reach a socket bound at `endpoint` on this machine."""
-    for everywhere in ("0.0.0.0", "*"):
-        endpoint = endpoint.replace(f"//{everywhere}:", "//127.0.0.1:")
-    return endpoint
 
 
 def listen(host: str, port: int) -> socket.socket:

@@ -4,15 +4,13 @@ import re
 from collections.abc import Mapping
 from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
-from typing import Any, Literal
+from typing import Literal
 
 from soundrose.errors import UsageError
-from soundrose.product.codec import rfc3339
 
-__all__ = ["BEGIN", "RESERVED", "Cursor", "CursorGone", "event_item", "parse_since"]
+__all__ = ["BEGIN", "Cursor", "CursorGone", "parse_since"]
 
 BEGIN = "begin"  #: the place before the first event there is, in whichever log
-RESERVED = frozenset({"cursor", "kind", "t", "time", "recorded"})  #: keys of an item that no payload may have
 _CURSOR = re.compile(r"([0-9a-f]{16})-([0-9]{1,18})")
 _MOMENT = re.compile(
     r"(\d{4}-\d{2}-\d{2})[Tt ](\d{2}:\d{2}:\d{2})(?:\.(\d{1,9})\d*)?([Zz]|[+-]\d{2}:\d{2})", re.ASCII
@@ -92,15 +90,3 @@ def _nanoseconds(text: str, found: re.Match[str]) -> int:
     if not -_MOST_NS <= t_ns <= _MOST_NS:
         raise UsageError(f"since is {text[:80]!r}; times from 1678 to 2262 can be asked for")
     return t_ns
-
-
-def event_item(place: Cursor, kind: str, t_ns: int, recorded_ns: int, payload: Mapping[str, Any]) -> dict[str, Any]:
-    """One event as JSON answers have it. place : the cursor after it.  t_ns, recorded_ns : ns since 1970 UTC."""
-    return {
-        "cursor": str(place),
-        "kind": kind,
-        "t": t_ns,
-        "time": rfc3339(t_ns),
-        "recorded": recorded_ns,
-        **payload,
-    }

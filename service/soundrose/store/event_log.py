@@ -15,11 +15,11 @@ from typing import Any
 
 from soundrose.errors import StartError, UsageError
 from soundrose.settings_types import StoreSettings
-from soundrose.store.cursors import RESERVED
+from soundrose.store.items import RESERVED, NewEvent
 from soundrose.store.log_file import LogFile, open_log_file
 from soundrose.store.schema import FILE_NAME, Connection, Damaged, connect_writer, is_damage
 
-__all__ = ["COMMIT_S", "QUEUE_EVENTS", "Entry", "EventLog", "NewEvent"]
+__all__ = ["COMMIT_S", "PAYLOAD_BYTES", "QUEUE_EVENTS", "Entry", "EventLog"]
 
 COMMIT_S = 0.8  #: from the first event of a batch to its commit; with the disk's own time, within a second
 QUEUE_EVENTS = 10_000  #: waiting at most, for a disk that is slow or full
@@ -29,15 +29,6 @@ _URGENT_S = 0.1  #: between two commits that were asked for at once
 _RETRY_S = 1.0
 _TIDY_S = 30.0  #: without events, retention is looked at this often
 _log = logging.getLogger("soundrose")
-
-
-@dataclass(frozen=True, slots=True)
-class NewEvent:
-    """An event to be written. t_ns : feed time or host time, as its kind says.  payload : plain values (JSON)."""
-
-    kind: str
-    t_ns: int
-    payload: Mapping[str, Any]
 
 
 @dataclass(slots=True, eq=False)

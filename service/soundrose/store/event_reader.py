@@ -10,7 +10,8 @@ from pathlib import Path
 from typing import Any
 
 from soundrose.errors import StreamError, UsageError
-from soundrose.store.cursors import Cursor, CursorGone, event_item
+from soundrose.store.cursors import Cursor, CursorGone
+from soundrose.store.items import event_item
 from soundrose.store.schema import APPLICATION_ID, FILE_NAME, VERSION, connect_reader, log_id
 
 __all__ = ["MOST_ITEMS", "EventReader", "NoLog"]

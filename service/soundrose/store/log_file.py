@@ -9,7 +9,8 @@ from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import Any, Protocol
 
-from soundrose.store.cursors import Cursor, event_item
+from soundrose.store.cursors import Cursor
+from soundrose.store.items import event_item
 from soundrose.store.schema import (
     Connection,
     Damaged,
