@@ -220,6 +220,11 @@ MISTAKES: list[tuple[dict[str, Any], str]] = [
     ({"serve.port": 65536}, "serve.port: got 65536; must be a port from 0 (any free one) to 65535"),
     ({"serve.ports": 1}, "serve.ports: unknown key; did you mean 'port'?"),
     ({"store.path": ""}, 'store.path: got ""; must be the path of a folder'),
+    ({"store.retain_days": 0}, "store.retain_days: got 0; must be a number of days above 0, at most 36500"),
+    ({"store.retain_mb": 0.5}, "store.retain_mb: got 0.5; must be a whole number of megabytes from 1 to 1000000"),
+    ({"log": {"format": "jason"}}, "log.format: got \"jason\"; must be one of text, json; did you mean 'json'?"),
+    ({"log": {"level": 1}}, "log.level: unknown key; keys here: format"),
+    ({"stream.commands": "ipc"}, f'stream.commands: got "ipc"; {ENDPOINT}'),
     ({"store.paths": ""}, "store.paths: unknown key; did you mean 'path'?"),
 ]  # fmt: skip
 
