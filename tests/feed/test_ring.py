@@ -54,29 +54,26 @@ def test_band_behind_the_ring_gets_the_newest_then_those_that_follow():
     assert numbers_taken(ring) == [(0, 0)]
     for number in range(1, 10):
         ring.add_hop(hop(number))
-    assert numbers_taken(ring) == []  # still busy with hop 0, and hop 1 is not the newest
+    assert numbers_taken(ring) == []  # still busy with hop 0
     ring.acknowledge("a", 1)
     assert numbers_taken(ring) == [(9, 8)]  # 1 to 8 are lost to it
     ring.add_hop(hop(10))
     ring.add_hop(hop(11))
     ring.acknowledge("a", 2)
-    assert numbers_taken(ring) == [(10, 0), (11, 0)]  # 11 is the newest, so it may be sent ahead
-    ring.add_hop(hop(12))
-    ring.add_hop(hop(13))
+    assert numbers_taken(ring) == [(10, 0)]
     ring.acknowledge("a", 3)
-    assert numbers_taken(ring) == []  # still busy with 11, and 12 is not the newest
-    ring.acknowledge("a", 4)
-    assert numbers_taken(ring) == [(12, 0), (13, 0)]
+    assert numbers_taken(ring) == [(11, 0)]
 
 
 def test_band_a_little_behind_still_gets_hops_in_a_row():
     ring = HopRing(3, False, ["a"])
     ring.join("a", "s", ())
-    for number in range(4):
+    for number in range(3):
         ring.add_hop(hop(number))
-        assert ring.take("a") is None or number == 0 or number == 1
-    ring.acknowledge("a", 2)
-    assert numbers_taken(ring) == [(2, 0), (3, 0)]
+    assert numbers_taken(ring) == [(0, 0)]
+    ring.add_hop(hop(3))
+    ring.acknowledge("a", 1)
+    assert numbers_taken(ring) == [(1, 0)]
 
 
 def test_hops_and_missed_add_up_to_all_hops_under_random_loads():
@@ -151,6 +148,7 @@ def test_first_hop_of_a_band_that_came_back_is_marked_resumed_and_no_other():
     ring.add_hop(hop(1))
     ring.add_hop(hop(2))
     assert ring.take("a").resumed
+    ring.acknowledge("a", 1)
     assert not ring.take("a").resumed
 
 

@@ -3,8 +3,8 @@
 Each band has a cursor, the ordinal of the hop it gets next, and a window, how many hops it may hold unacknowledged.
 
 `drop`: the ring keeps the newest `capacity` hops. A band whose next hop has left the ring is behind: it gets the
-newest hop with a count of what it missed, then the hops that follow in a row. A band that is busy is sent a second
-hop ahead only if that is the newest: hops that wait with the band would age outside the ring's bound.
+newest hop with a count of what it missed, then the hops that follow in a row. A band has one hop at a time: one that
+waited with a busy band would age outside the ring's bound.
 `hold`: a hop stays until every configured band has acknowledged it, and `blocked` tells ingest to stop reading.
 
 Notes (navigation, positions, pulse) ride with the hop that follows them and are not lost with hops that are.
@@ -19,7 +19,6 @@ from soundrose.feed.hop import Hop, Note
 __all__ = ["Given", "HopRing", "ring_capacity"]
 
 WINDOW_HOLD = 4  #: hops on their way to a band in `hold`: keeps it busy over the round trip
-WINDOW_DROP = 2
 MAX_NOTES = 1024  #: kept for a band that is away; one that joins gets those in force anyway
 RING_S = 0.75
 
@@ -119,7 +118,7 @@ class HopRing:
     def take(self, name: str) -> Given | None:
         """The next hop for a band that may have one now; None if there is none or its window is full."""
         band = self._bands[name]
-        if not band.session or band.cursor >= self._end or len(band.given) >= self._window(band):
+        if not band.session or band.cursor >= self._end or len(band.given) >= self._window:
             return None
         missed, band.first_missed = band.first_missed, 0
         resumed, band.resumed = band.resumed, False
@@ -133,10 +132,9 @@ class HopRing:
         band.cursor += 1
         return Given(hop, notes, missed, resumed)
 
-    def _window(self, band: _Band) -> int:
-        if self._hold:
-            return WINDOW_HOLD
-        return WINDOW_DROP if band.cursor == self._end - 1 else 1
+    @property
+    def _window(self) -> int:
+        return WINDOW_HOLD if self._hold else 1
 
     def _notes_before(self, band: _Band, hop_i: int) -> tuple[Note, ...]:
         found = []
