@@ -12,6 +12,7 @@ import threading
 import time
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from pathlib import Path
 from datetime import UTC, datetime
 from typing import Any
 
@@ -21,7 +22,10 @@ from threadpoolctl import threadpool_limits
 
 from soundrose.settings_types import LogFormat, Settings
 
-__all__ = ["HEARTBEAT_S", "Heartbeat", "Lifeline", "Orders", "SlowLog", "new_start", "set_up_child", "set_up_logging"]
+__all__ = [
+    "HEARTBEAT_S", "Heartbeat", "Lifeline", "Orders", "SlowLog", "clock_name", "new_start", "set_up_child",
+    "set_up_logging",
+]  # fmt: skip
 
 HEARTBEAT_S = 0.25  #: a beat this often; the supervisor calls a child stuck after `supervise.STUCK_S`
 _PR_SET_PDEATHSIG = 1
@@ -166,6 +170,14 @@ class _JsonLines(logging.Formatter):
         if record.exc_info:
             line["trace"] = self.formatException(record.exc_info)
         return json.dumps(line, ensure_ascii=False)
+
+
+def clock_name() -> str:
+    """Names the host's monotonic clock: the boot it counts from. Two processes may compare times of one clock only."""
+    try:
+        return Path("/proc/sys/kernel/random/boot_id").read_text().strip()
+    except OSError:
+        return ""
 
 
 def set_up_logging(name: str, form: LogFormat = "text") -> None:

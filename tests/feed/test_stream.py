@@ -60,7 +60,8 @@ def test_hop_comes_out_as_it_went_in(channels, length, seed, missed):
 def test_welcome_and_report_come_out_as_they_went_in():
     report = Report("low", "0123", "4567", 12)
     assert decode_report(encode_report(report)) == report
-    assert decode_given(encode_welcome("4567")) == Welcome("4567")
+    welcome = Welcome("4567", "host")
+    assert decode_given(encode_welcome(welcome)) == welcome
 
 
 @pytest.mark.parametrize("data", [b"", b"\xc1", b"\x93\x01\x02\x03", encode_report(Report("a", "b", "c", 1))[:-1]])
@@ -72,6 +73,6 @@ def test_report_that_is_none_is_refused(data):
 
 def test_hop_cut_short_is_refused():
     parts = [bytes(part) for part in encode_given(make_given(2, 8, 0, 0))]
-    for cut in ([], parts[:1], parts[:4], [*parts[:2], parts[2][:-3], *parts[3:]]):
+    for cut in ([], [b"welcome", b"\xc0"], parts[:1], parts[:4], [*parts[:2], parts[2][:-3], *parts[3:]]):
         with pytest.raises(WireError):
             decode_given(cut)

@@ -2,13 +2,14 @@
 
 import time
 from collections import deque
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 import zmq
 from soundrose.beam.stage import BandStage
 
-from soundrose.child import HEARTBEAT_S, Heartbeat, Orders, SlowLog, new_start, set_up_child
+from soundrose.child import HEARTBEAT_S, Heartbeat, Orders, SlowLog, clock_name, new_start, set_up_child
 from soundrose.errors import WireError
 from soundrose.feed.hop import Note
 from soundrose.feed.ring import Given
@@ -68,6 +69,7 @@ class BandProcess:
         self._times = BandTimes(orders.settings.feed.rate_hz)
         self._maps = self._dropped_hops = self._taken = 0
         self._ingest = ""
+        self._same_clock = True
         self._report_due = 0.0
         self._hops = context.socket(zmq.DEALER)
         self._hops.setsockopt(zmq.IDENTITY, band.name.encode())
@@ -104,6 +106,7 @@ class BandProcess:
             case Welcome():
                 if message.ingest != self._ingest:
                     self._ingest, self._taken = message.ingest, 0
+                    self._same_clock = message.clock == clock_name()
                 self._report()
             case Given():
                 self._take(message)
@@ -136,7 +139,10 @@ class BandProcess:
         for note in given.notes:
             self._note(note)
         self._dropped_hops += given.missed
-        products = self._stage.push(given.hop, given.missed, resumed=given.resumed)
+        hop = given.hop
+        if not self._same_clock:  # ingest is on another host: the hop's arrival here is the nearest to its receipt
+            hop = replace(hop, received_ns=time.monotonic_ns())
+        products = self._stage.push(hop, given.missed, resumed=given.resumed)
         for product in products:
             self._publish(product)
         self._times.hop(given.hop.length, time.perf_counter() - begun)

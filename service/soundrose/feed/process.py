@@ -7,12 +7,12 @@ import zmq
 from soundrose.feed.intake import Intake
 from zmq.utils.monitor import recv_monitor_message
 
-from soundrose.child import Heartbeat, Orders, SlowLog, new_start, set_up_child
+from soundrose.child import Heartbeat, Orders, SlowLog, clock_name, new_start, set_up_child
 from soundrose.errors import WireError
 from soundrose.feed.hop import Hop, RunEnd, hop_length
 from soundrose.feed.record import SharedRecord
 from soundrose.feed.ring import HopRing, ring_capacity
-from soundrose.feed.stream import Report, decode_report, encode_given, encode_welcome
+from soundrose.feed.stream import Report, Welcome, decode_report, encode_given, encode_welcome
 from soundrose.product.codec import Envelope
 from soundrose.product.messages import HealthProduct
 from soundrose.product.proxy import bind_or_explain
@@ -151,7 +151,7 @@ class IngestProcess:
         if self._ring.session(report.band) != report.session:
             followed = report.ingest != ""
             self._ring.join(report.band, report.session, self._intake.in_force(), followed=followed)
-        self._bands.send_multipart([identity, *encode_welcome(self._start)])
+        self._bands.send_multipart([identity, *encode_welcome(Welcome(self._start, clock_name()))])
 
     def _hand_on(self) -> None:
         for band in self._ring.bands:

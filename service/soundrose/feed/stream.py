@@ -2,8 +2,8 @@
 
 ROUTER (ingest, bound) and DEALER (band). A band says, at once when it is done with a hop and else every quarter second,
 `[msgpack {band, session, ingest, taken}]`: `session` names its process, `ingest` the ingest process it believes it
-talks to ("" at first). Ingest answers one that names another with `[b"welcome", msgpack {ingest}]`, from which
-`taken` counts anew. A hop is `[b"hop", msgpack head, samples, times, bad, clipped]`, arrays little-endian, C order.
+talks to ("" at first). Ingest answers one that names another with `[b"welcome", msgpack [ingest, clock]]`, from which
+`taken` counts anew; `clock` names the monotonic clock that `received_ns` was read from. A hop is `[b"hop", msgpack head, samples, times, bad, clipped]`, arrays little-endian, C order.
 """
 
 from collections.abc import Sequence
@@ -32,9 +32,10 @@ class Report:
 
 @dataclass(frozen=True, slots=True)
 class Welcome:
-    """Ingest names itself; the band's count of hops taken begins anew."""
+    """Ingest names itself and its clock; the band's count of hops taken begins anew."""
 
     ingest: str
+    clock: str
 
 
 def encode_report(report: Report) -> bytes:
@@ -52,8 +53,8 @@ def decode_report(data: bytes) -> Report:
     return Report(band, session, ingest, taken)
 
 
-def encode_welcome(ingest: str) -> list[bytes]:
-    return [b"welcome", bytes(msgpack.packb(ingest))]
+def encode_welcome(welcome: Welcome) -> list[bytes]:
+    return [b"welcome", bytes(msgpack.packb([welcome.ingest, welcome.clock]))]
 
 
 def encode_given(given: Given) -> list[Any]:
@@ -77,7 +78,8 @@ def decode_given(parts: Sequence[bytes | memoryview]) -> Given | Welcome:
     """What ingest sent. Raises WireError("stream") if it is not that."""
     try:
         if bytes(parts[0]) == b"welcome":
-            return Welcome(msgpack.unpackb(parts[1]))
+            ingest, clock = msgpack.unpackb(parts[1])
+            return Welcome(str(ingest), str(clock))
         _, head_bytes, samples, times, bad, clipped = parts
         head = msgpack.unpackb(head_bytes)
         hop = Hop(
