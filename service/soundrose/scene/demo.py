@@ -39,7 +39,7 @@ def demo(seconds: float | None = None, port: int = 8080, console: Console | None
 
     port : of HTTP; 0 takes any free port for everything. StartError: the service did not start.
     """
-    console = console or Console()
+    console = console or _console()
     signal.signal(signal.SIGTERM, signal.default_int_handler)
     with tempfile.TemporaryDirectory(prefix="soundrose-demo-") as folder:
         place = Path(folder)
@@ -49,6 +49,13 @@ def demo(seconds: float | None = None, port: int = 8080, console: Console | None
                 return _watch(ready, seconds, console)
         except KeyboardInterrupt:  # before there was anything to watch
             return 0
+
+
+def _console() -> Console:
+    """With 256 colours in a terminal that does not say how many it has: sixteen cannot show levels."""
+    console = Console()
+    plain = console.color_system == "standard" and os.environ.get("TERM") != "linux"
+    return Console(color_system="256") if plain else console
 
 
 @contextmanager

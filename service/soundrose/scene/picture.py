@@ -24,7 +24,8 @@ ANCHORS: Final = (
 )  # fmt: skip
 SPAN_DB: Final = 40.0  # from the lowest colour to the highest: side lobes and images show, the floor does not
 MARGIN: Final = 8  # characters left of the picture: "1234 Hz "
-TICKS_DEG: Final = (0, 30, 45, 60, 75, 90, 105, 120, 135, 150, 180)
+TICKS_DEG: Final = (0, 90, 180, 60, 120, 30, 150, 75, 105, 45, 135)  # the most wanted first
+AXES: Final = "frequency upwards, cone angle along: 0° forward, 90° broadside, 180° aft"
 UNIT: Final = "dB re 1 µPa²/Hz"
 
 
@@ -53,8 +54,8 @@ def map_picture(
     if width < 30 or height < 6:
         raise UsageError(f"{width} x {height} characters are too few for a map; at least 30 x 6")
     reduced = reduce_levels(level_db, cone_deg, f0_hz, df_hz, bins=2 * (height - 3), beams=width - MARGIN)
-    top_db = 5 * np.ceil(float(level_db.max()) / 5)
-    text = Text(no_wrap=True)
+    top_db = 5 * np.ceil(float(reduced.values.max()) / 5)
+    text = Text(f"{'':{MARGIN}}{AXES[: width - MARGIN]}\n", no_wrap=True)
     rows = -(-reduced.values.shape[1] // 2)
     for row in reversed(range(rows)):
         text.append(_frequency_label(reduced, 2 * row, rows))
@@ -88,17 +89,15 @@ def _frequency_label(reduced: ReducedMap, lower: int, rows: int) -> str:
 
 
 def _degree_axis(cone_deg: Sequence[float]) -> str:
-    """Cone angles under their beams; one that would touch its neighbour is left out."""
+    """Cone angles under their beams; one that would touch another already there is left out."""
     line = [" "] * (MARGIN + len(cone_deg) + 4)
-    free = MARGIN - 4
     for tick in TICKS_DEG:
         beam = int(np.argmin(np.abs(np.cos(np.deg2rad(cone_deg)) - np.cos(np.deg2rad(tick)))))
         label = f"{tick}°"
         begin = MARGIN + beam - len(label) // 2
-        if begin > free:
+        if not "".join(line[begin - 1 : begin + len(label) + 1]).strip():
             line[begin : begin + len(label)] = label
-            free = begin + len(label)
-    return "".join(line).rstrip() + "  cone angle, 0° forward"
+    return "".join(line).rstrip()
 
 
 def scale_line(top_db: float, width: int) -> Text:
