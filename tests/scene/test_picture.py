@@ -27,10 +27,10 @@ def cells(text):
 
 
 def test_colours_are_the_published_ones():
-    """cividis as matplotlib ships it, to 8 of 255: between two anchors its blue has a bend."""
+    """cividis as matplotlib ships it, to 6 of 255: between two anchors its blue has a bend."""
     published = matplotlib.colormaps["cividis"]
     for share in np.linspace(0, 1, 101):
-        assert colour(float(share)) == pytest.approx([255 * v for v in published(float(share))[:3]], abs=8)
+        assert colour(float(share)) == pytest.approx([255 * v for v in published(float(share))[:3]], abs=6)
 
 
 def test_colours_rise_evenly_in_lightness():
