@@ -7,8 +7,8 @@ from typing import Any
 
 import numpy as np
 import zmq
-from soundrose.beam.stage import BandStage
 
+from soundrose.beam.stage import BandStage
 from soundrose.child import HEARTBEAT_S, Heartbeat, Orders, SlowLog, clock_name, new_start, set_up_child
 from soundrose.errors import WireError
 from soundrose.feed.hop import Note

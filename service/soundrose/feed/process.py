@@ -4,12 +4,12 @@ import time
 from typing import Any
 
 import zmq
-from soundrose.feed.intake import Intake
 from zmq.utils.monitor import recv_monitor_message
 
 from soundrose.child import Heartbeat, Orders, SlowLog, clock_name, new_start, set_up_child
 from soundrose.errors import WireError
 from soundrose.feed.hop import Hop, RunEnd, hop_length
+from soundrose.feed.intake import Intake
 from soundrose.feed.record import SharedRecord
 from soundrose.feed.ring import HopRing, ring_capacity
 from soundrose.feed.stream import Report, Welcome, decode_report, encode_given, encode_welcome

@@ -1,9 +1,10 @@
 """codec: hops from ingest to bands, and what bands answer (inside the service; not part of the contract).
 
 ROUTER (ingest, bound) and DEALER (band). A band says, at once when it is done with a hop and else every quarter second,
-`[msgpack {band, session, ingest, taken}]`: `session` names its process, `ingest` the ingest process it believes it
+`[msgpack [band, session, ingest, taken]]`: `session` names its process, `ingest` the ingest process it believes it
 talks to ("" at first). Ingest answers one that names another with `[b"welcome", msgpack [ingest, clock]]`, from which
-`taken` counts anew; `clock` names the monotonic clock that `received_ns` was read from. A hop is `[b"hop", msgpack head, samples, times, bad, clipped]`, arrays little-endian, C order.
+`taken` counts anew; `clock` names the monotonic clock that `received_ns` was read from. A hop is `[b"hop", msgpack
+head, samples, times, bad, clipped]`, arrays little-endian, C order.
 """
 
 from collections.abc import Sequence
