@@ -12,7 +12,7 @@ from typing import Any
 from soundrose.errors import ConfigError
 from soundrose.settings_array import MAX_HYDROPHONES, parse_array, parse_calibration, parse_water, place
 from soundrose.settings_bands import Surroundings, parse_bands
-from soundrose.settings_reader import Notes, Table, shown
+from soundrose.settings_reader import Notes, Table, one_line, shown
 from soundrose.settings_services import (
     check_endpoints,
     parse_detection,
@@ -52,7 +52,7 @@ def load_settings(path: str | Path) -> Settings:
     try:
         raw = tomllib.loads(_read_text(path))
     except (OSError, RecursionError, ValueError) as error:
-        raise ConfigError([f"{path.name}: {_why(error)}"]) from None
+        raise ConfigError([one_line(f"{path.name}: {_why(error)}")]) from None
     return parse_settings(raw, path.parent, path.name)
 
 

@@ -6,7 +6,7 @@ from difflib import get_close_matches
 from math import isfinite
 from typing import Any
 
-__all__ = ["Notes", "Table", "finite", "is_integer", "shown"]
+__all__ = ["Notes", "Table", "finite", "is_integer", "one_line", "shown"]
 
 #: longest piece of a wrong value that is repeated in a message
 SHOWN_CHARACTERS = 60
@@ -21,10 +21,10 @@ class Notes:
         self.warnings: list[str] = []
 
     def problem(self, where: str, what: str) -> None:
-        self.problems.append(f"{self.file_name}: {where}: {what}")
+        self.problems.append(one_line(f"{self.file_name}: {where}: {what}"))
 
     def warning(self, where: str, what: str) -> None:
-        self.warnings.append(f"{self.file_name}: {where}: {what}")
+        self.warnings.append(one_line(f"{self.file_name}: {where}: {what}"))
 
 
 class Table:
@@ -147,12 +147,17 @@ def is_integer(value: Any) -> bool:
     return isinstance(value, int) and not isinstance(value, bool)
 
 
+def one_line(text: str) -> str:
+    """`text` with line ends and other unprintable characters written as escapes: a quoted key may hold any."""
+    return "".join(c if c.isprintable() else c.encode("unicode_escape").decode("ascii") for c in text)
+
+
 def shown(value: Any) -> str:
     """A value as a settings file would write it, cut short."""
     if isinstance(value, bool):
         text = str(value).lower()
     elif isinstance(value, str):
-        text = '"' + value.encode("unicode_escape").decode("ascii") + '"' if not value.isprintable() else f'"{value}"'
+        text = f'"{one_line(value)}"'
     elif isinstance(value, list):
         text = "[" + ", ".join(shown(item) for item in value[:SHOWN_CHARACTERS]) + "]"
     elif isinstance(value, Mapping):

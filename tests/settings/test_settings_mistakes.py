@@ -95,6 +95,8 @@ MISTAKES: list[tuple[dict[str, Any], str]] = [
     ({"array.exclude": [3, 3]}, "array.exclude: got [3, 3]; must be a list of different channel numbers from 0 to 47"),
     ({"array.exclude": 3}, "array.exclude: got 3; must be a list of different channel numbers from 0 to 47"),
     ({"array.exclud": []}, "array.exclud: unknown key; did you mean 'exclude'?"),
+    ({"feed.a\nb": 1}, "feed.a\\nb: unknown key; keys here: bind, rate_hz, overload"),
+    ({"feed.overload": "a\nµ"}, 'feed.overload: got "a\\nµ"; must be one of drop, hold'),
     ({"feeds": {}}, "feeds: unknown key; did you mean 'feed'?"),
     ({"zzz": {}}, f"zzz: unknown key; keys here: {', '.join(TABLES)}"),
     ({"feed.bind": "tcp://127.0.0.1"}, f'feed.bind: got "tcp://127.0.0.1"; {ENDPOINT}'),
