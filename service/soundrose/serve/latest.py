@@ -1,6 +1,6 @@
 """core: the newest message of every topic, and whether the service is ready by the newest status."""
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Any
 
@@ -24,9 +24,16 @@ class Latest:
 
     def __init__(self) -> None:
         self._messages: dict[str, Message] = {}
+        self._listeners: list[Callable[[Message], None]] = []
+
+    def listen(self, listener: Callable[[Message], None]) -> None:
+        """Call `listener` with every message put from now on; it must not wait and must not raise."""
+        self._listeners.append(listener)
 
     def put(self, message: Message) -> None:
         self._messages[message.topic] = message
+        for listener in self._listeners:
+            listener(message)
 
     def get(self, topic: str) -> Message | None:
         return self._messages.get(topic)
