@@ -4,6 +4,7 @@ import asyncio
 import contextlib
 import socket
 import time
+from pathlib import Path
 from urllib.parse import urlsplit
 
 import uvicorn
@@ -15,8 +16,14 @@ from soundrose.errors import StartError, WireError
 from soundrose.product.addresses import connect_address
 from soundrose.product.codec import decode_published
 from soundrose.serve.app import Source, make_app
+from soundrose.serve.commands import CommandClient
+from soundrose.serve.event_calls import add_events
+from soundrose.serve.events import EventTap
 from soundrose.serve.guard import Guard, host_names
 from soundrose.serve.latest import Latest, Message, not_ready
+from soundrose.serve.live import add_live
+from soundrose.serve.metrics import add_metrics
+from soundrose.serve.websocket import WEBSOCKET_OPTIONS
 
 __all__ = ["listen", "main"]
 
@@ -83,7 +90,13 @@ async def _serve(orders: Orders, lifeline: Lifeline, listener: socket.socket, ho
     subscriber.setsockopt(zmq.RECONNECT_IVL, 20)
     subscriber.setsockopt(zmq.RECONNECT_IVL_MAX, 200)
     subscriber.setsockopt(zmq.SUBSCRIBE, b"")
-    app = make_app(Source(orders.settings, latest, time.monotonic))
+    source = Source(orders.settings, latest, time.monotonic)
+    app = make_app(source)
+    tap = EventTap(Path(orders.settings.store.path))
+    commands = CommandClient(context, orders.endpoints["commands"])
+    add_events(app, tap, commands)
+    add_metrics(app, latest)
+    add_live(app, source, tap)
     config = uvicorn.Config(
         Guard(app, host_names(host, port, _own_names())),
         log_config=None,
@@ -91,13 +104,14 @@ async def _serve(orders: Orders, lifeline: Lifeline, listener: socket.socket, ho
         access_log=False,
         server_header=False,
         timeout_graceful_shutdown=_GRACE_S,
-        ws_max_size=64 * 1024,
-        ws_per_message_deflate=False,
+        **WEBSOCKET_OPTIONS,
     )
     server = uvicorn.Server(config)
     shown = f"[{host}]" if ":" in host else host
     try:
         subscriber.connect(connect_address(orders.endpoints["publish"]))
+        await tap.start()
+        await commands.start()
         async with asyncio.TaskGroup() as tasks:
             running = [
                 tasks.create_task(_collect(subscriber, latest)),
@@ -108,6 +122,8 @@ async def _serve(orders: Orders, lifeline: Lifeline, listener: socket.socket, ho
             for task in running:
                 task.cancel()
     finally:
+        await tap.stop()
+        await commands.stop()
         subscriber.close()
         context.term()
 
