@@ -82,7 +82,7 @@ def test_lateness_goes_on_over_a_run_but_not_back_in_time(source_for):
 def test_notes_in_force_are_what_acts_now_and_what_will(source_for):
     source = source_for()
     source.block(0, 100)
-    for index, speed in [(10, 1480.0), (20, 1481.0), (500, 1482.0), (300, 1483.0)]:
+    for index, speed in [(20, 1480.0), (10, 1481.0), (500, 1482.0), (300, 1483.0)]:
         source.send(encode_navigation("aft", source.t(index), sound_speed_m_s=speed))
     source.send(encode_navigation("aft", source.t(20), heading_deg=1.0))
     source.send(encode_positions("aft", source.t(0), PLACES))
@@ -200,8 +200,8 @@ def test_snapshot_keeps_what_the_rules_need(source_for, after):
         source.block(0, 128, run="b")
     resumed = source_for(snapshot=source.intake.snapshot())
     for each in (source, resumed):
-        each.block(128, 32)
         each.block(10**9 + 100, 100, t=source.t(600))
+        each.block(128, 32)
         each.block(160, 32, run="b", t=source.t(700))
         each.block(192, 32, t=source.t(800))
         each.intake.counters.unused_samples = 0  # the tail of a stretch that a restart cut is another

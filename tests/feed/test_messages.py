@@ -336,11 +336,13 @@ def test_repeated_bytes_are_decoded_or_refused(pattern, times):
     decodes_or_is_refused([b"\x81\xa1v" + pattern * times])
 
 
-@pytest.mark.parametrize("claim", [b"\xdc\x04\x00", b"\xdc\xff\xff", b"\xdd\x00\x0f\xff\xff", b"\xdf\xff\xff\xff\xff"])
+@pytest.mark.parametrize(
+    "claim", [b"\xdc\x04\x00", b"\xdc\xea\x00", b"\xdc\xff\xff", b"\xdd\x00\x0f\xff\xff", b"\xdf\xff\xff\xff\xff"]
+)
 def test_claimed_lengths_cost_no_memory(claim):
     tracemalloc.start()
     try:
-        assert reason([b"\x81\xa1v" + claim * 1000]) == "msgpack"
+        assert reason([b"\x81\xa1v" + claim * 1000 + bytes(58_000)]) == "msgpack"
         assert tracemalloc.get_traced_memory()[1] < 16 * 2**20
     finally:
         tracemalloc.stop()
