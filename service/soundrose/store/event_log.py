@@ -207,7 +207,7 @@ class EventLog:
         if self._urgent:
             return self._committed_at + _URGENT_S
         if self._waiting > self._most // 2:
-            return self._monotonic()
+            return self._oldest
         return self._oldest + COMMIT_S
 
     def _forget(self, batch: list[Entry]) -> None:

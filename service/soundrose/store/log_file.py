@@ -6,6 +6,7 @@ import logging
 import os
 import sqlite3
 from collections.abc import Callable, Mapping, Sequence
+from math import ceil
 from pathlib import Path
 from typing import Any, Protocol
 
@@ -73,7 +74,7 @@ class LogFile:
     @property
     def unused(self) -> bool:
         """No event was ever written."""
-        return bool(self._one("SELECT count(*) FROM sqlite_sequence WHERE name = 'event'") == 0)
+        return self._newest() == 0
 
     def write(self, entries: Sequence[_Entry], lost: int, now_ns: int) -> list[list[dict[str, Any]]]:
         """Write all entries in one transaction; the items of each. lost : events to be told of as lost, if any."""
@@ -96,15 +97,12 @@ class LogFile:
     def tidy(self, oldest_ns: int, most_bytes: int) -> None:
         """Delete the oldest events if they were recorded before oldest_ns or the log uses over most_bytes: a step.
 
-        A step deletes at least twice what came since the last, so that it keeps up with any rate.
+        A step may delete twice what came since the last, so that it keeps up with any rate.
         """
         step, self._fresh = max(_STEP_ROWS, 2 * self._fresh), 0
         self.size_bytes = self._used_bytes()
-        too_big = self.size_bytes > most_bytes
-        window = "SELECT id, recorded FROM event ORDER BY id LIMIT ?"
-        chosen = f"SELECT max(id), count(*) FROM ({window})" + ("" if too_big else " WHERE recorded < ?")
-        last, rows = self._connection.execute(chosen, (step,) if too_big else (step, oldest_ns)).fetchone()
-        self.untidy = last is not None and rows > 0
+        last = max(self._last_by_age(step, oldest_ns), self._last_by_size(step, most_bytes))
+        self.untidy = last > self._floor
         if self.untidy:
             with self._transaction():
                 self._connection.execute("DELETE FROM event WHERE id <= ?", (last,))
@@ -114,6 +112,22 @@ class LogFile:
         self._connection.execute(f"PRAGMA incremental_vacuum({_VACUUM_PAGES})").fetchall()
         self.untidy |= self._free_pages() > _VACUUM_PAGES
         self.size_bytes = self._used_bytes()
+
+    def _last_by_age(self, step: int, oldest_ns: int) -> int:
+        """The last of the oldest `step` rows that is too old: what lies before it is older, whatever its clock said."""
+        window = "SELECT id, recorded FROM event ORDER BY id LIMIT ?"
+        found = self._connection.execute(f"SELECT max(id) FROM ({window}) WHERE recorded < ?", (step, oldest_ns))
+        return int(found.fetchone()[0] or self._floor)
+
+    def _last_by_size(self, step: int, most_bytes: int) -> int:
+        """The row up to which to delete, by the mean size of a row, so that the log is small enough."""
+        rows, excess = self._newest() - self._floor, self.size_bytes - most_bytes
+        if excess <= 0 or rows <= 0:
+            return self._floor
+        return self._floor + min(step, rows, ceil(rows * excess / self.size_bytes))
+
+    def _newest(self) -> int:
+        return int(self._one("SELECT coalesce(max(seq), 0) FROM sqlite_sequence WHERE name = 'event'"))
 
     def close(self) -> None:
         with contextlib.suppress(sqlite3.Error):
