@@ -6,6 +6,7 @@ from pathlib import Path
 import pytest
 from rich.console import Console
 
+from soundrose.array.limits import line_of
 from soundrose.check import CAUTIONS, check_file, check_report, check_warnings
 from soundrose.settings import load_settings, parse_settings
 
@@ -87,6 +88,8 @@ def test_too_few_beams_are_told_with_the_number_that_would_do():
     (warning,) = check_warnings(line_settings({"beams": 90}))
     assert warning.startswith("band main: 90 beams are few: between two of them 2")
     beams = int(warning.split("; ")[1].split()[0])
+    line = line_of(line_settings(), line_settings().bands[0])
+    assert line.scalloping_db(4000.0, beams) <= 0.5 < line.scalloping_db(4000.0, beams - 1)
     assert check_warnings(line_settings({"beams": beams})) == ()
     assert len(check_warnings(line_settings({"beams": beams - 1}))) == 1
 

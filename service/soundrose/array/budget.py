@@ -12,10 +12,11 @@ from soundrose.errors import UsageError
 
 __all__ = ["Budget", "band_budget", "bin_range", "weight_bytes", "why_not_pairs"]
 
-#: multiply-adds per second taken for one ordinary core in single precision, and its rate in passes bound by memory:
-#: from a two-core x86 machine (64 hydrophones, 181 beams, 3000 bins: 3 ms a frame by pairs); an estimate, no promise
-PRODUCT_PER_S = 6e9
-PASSES_PER_S = 8e8
+#: multiply-adds per second of one ordinary core in single precision, and its rate in passes bound by memory: chosen so
+#: that the estimate lies within a fifth of the times measured on a busy two-core x86 machine for 48, 64 and 128
+#: hydrophones, pairs and general (4.6, 22, 58 and 59 ms a frame)
+PRODUCT_PER_S = 4e9
+PASSES_PER_S = 5e8
 #: frames a band worker keeps at once besides its weights: input, spectra, chunk buffers
 FRAMES_KEPT = 4
 
