@@ -34,14 +34,7 @@ def plain(steer, transform):
     n = steer.frame_length
     beams = np.empty((len(steer.cos), n), dtype=complex)
     for beam_i in range(len(steer.cos)):
-        weights = np.concatenate(
-            [
-                t
-                for _, t in delay_transforms(
-                    steer.samples(slice(beam_i, beam_i + 1), slice(None))[0], n, (0, n // 2 + 1)
-                )
-            ]
-        )
+        weights = delay_transforms(steer.samples(slice(beam_i, beam_i + 1), slice(None))[0], n, (0, n // 2 + 1))
         half = (steer.weights[:, None] * weights * transform).sum(axis=0)
         beams[beam_i] = np.concatenate([half, half[-2:0:-1].conj()])
     tapered = beams / 2 - (np.roll(beams, 1, axis=1) + np.roll(beams, -1, axis=1)) / 4

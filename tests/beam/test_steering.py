@@ -23,7 +23,7 @@ def test_delay_error_stays_below_the_stated_limit(top, limit_db):
     delays, n = np.linspace(-30, 30, 241), 2048
     f = np.arange(n // 2 + 1) / n
     f = f[f <= top]
-    spectra = np.concatenate([t for _, t in delay_transforms(delays, n, (0, len(f)))])
+    spectra = delay_transforms(delays, n, (0, len(f)))
     error = np.abs(spectra - np.exp(-2j * np.pi * f * delays[:, None]))
     assert 20 * np.log10(np.sqrt(np.mean(error**2, axis=0)).max()) <= limit_db
 
@@ -37,13 +37,13 @@ def test_a_whole_sample_delay_is_one_tap():
 
 def test_transforms_do_not_depend_on_the_batch():
     delays = np.random.default_rng(0).uniform(-20, 20, 150)
-    together = np.concatenate([t for _, t in delay_transforms(delays, 256, (3, 90))])
-    alone = np.concatenate([t for d in delays for _, t in delay_transforms(np.array([d]), 256, (3, 90))])
+    together = delay_transforms(delays, 256, (3, 90))
+    alone = np.concatenate([delay_transforms(np.array([d]), 256, (3, 90)) for d in delays])
     np.testing.assert_array_equal(together, alone)
 
 
 def test_bin_below_zero_is_the_conjugate_of_bin_one():
-    (_, with_it), (_, without) = (next(delay_transforms(np.array([2.3]), 128, kept)) for kept in ((-1, 5), (0, 5)))
+    with_it, without = (delay_transforms(np.array([2.3]), 128, kept) for kept in ((-1, 5), (0, 5)))
     np.testing.assert_array_equal(with_it[:, 1:], without)
     assert with_it[0, 0] == without[0, 1].conj()
     assert kept_bins((0, 4)) == (-1, 5)

@@ -1,4 +1,4 @@
-"""Reference tests of beams use the plane waves of the beam room. BLAS keeps to one thread, as in every process of the service."""
+"""Reference tests of beams use the plane waves of the beam room. BLAS keeps to one thread, as in the service."""
 
 import sys
 from pathlib import Path

@@ -83,12 +83,10 @@ class BeamSeries:
     def _transforms(self, steering: Steering) -> NDArray[np.complex64]:
         """(beams, channels, N/2 + 1) weights."""
         beams, channels = len(steering.cos), len(steering.x_m)
-        weights = np.empty((beams * channels, self.frame_length // 2 + 1), dtype=np.complex64)
-        shading = np.tile(steering.weights, beams)
-        delays = steering.samples(slice(None), slice(None)).ravel()
-        for which, transform in delay_transforms(delays, self.frame_length, (0, weights.shape[1])):
-            weights[which] = transform * shading[which, None]
-        return weights.reshape(beams, channels, -1)
+        weights = np.empty((beams, channels, self.frame_length // 2 + 1), dtype=np.complex64)
+        for beam, delays in zip(weights, steering.samples(slice(None), slice(None)), strict=True):
+            beam[:] = delay_transforms(delays, self.frame_length, (0, weights.shape[2])) * steering.weights[:, None]
+        return weights
 
     def _piece(self, frame: Frame) -> SeriesPiece:
         spectra = fft.rfft(frame.samples, axis=1)

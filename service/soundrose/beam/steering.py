@@ -4,7 +4,7 @@ A plane wave from the direction of cosine u is recorded by hydrophone m as p(t +
 the time by which its channel is sampled LATE. Steering delays it by tau = x_m u / c + delay_m: what comes out is p(t).
 """
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -16,10 +16,10 @@ from soundrose.array.filters import KAISER_BETA, LOBES, min_frame, tap_count
 from soundrose.array.geometry import Geometry
 from soundrose.errors import UsageError
 
-__all__ = ["Steering", "delay_filters", "delay_transforms", "kept_bins"]
+__all__ = ["BATCH", "Steering", "delay_filters", "delay_transforms", "kept_bins"]
 
 #: filters transformed at once: a few MB of double precision, so that the work stays near the cache
-_BATCH = 64
+BATCH = 64
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -134,21 +134,17 @@ def delay_filters(delays: NDArray[np.float64]) -> tuple[NDArray[np.intp], NDArra
 
 def delay_transforms(
     delays: NDArray[np.float64], frame_length: int, kept: tuple[int, int]
-) -> Iterator[tuple[slice, NDArray[np.complex128]]]:
-    """N-point transforms of the filters at bins kept[0] .. kept[1]-1, in batches: (which filters, (them, bins)).
+) -> NDArray[np.complex128]:  # fmt: skip
+    """(filters, bins) N-point transforms of the filters, at bins kept[0] .. kept[1]-1.
 
-    delays : (filters,) samples.  kept : from -1 (the conjugate of bin 1) to at most N/2 + 1.
+    delays : (filters,) samples; about `BATCH` at once are done best.  kept : from -1 (the conjugate of bin 1) to at
+    most N/2 + 1.
     """
     first, stop = kept
-    padded = np.empty((_BATCH, frame_length))
-    for begin in range(0, len(delays), _BATCH):
-        batch = slice(begin, min(begin + _BATCH, len(delays)))
-        at, taps = delay_filters(delays[batch])
-        block = padded[: len(at)]
-        block.fill(0.0)
-        np.put_along_axis(block, at % frame_length, taps, axis=1)
-        spectra = fft.rfft(block, axis=1)
-        if first < 0:
-            yield batch, np.concatenate([spectra[:, 1:2].conj(), spectra[:, :stop]], axis=1)
-        else:
-            yield batch, spectra[:, first:stop]
+    at, taps = delay_filters(delays)
+    padded = np.zeros((len(at), frame_length))
+    np.put_along_axis(padded, at % frame_length, taps, axis=1)
+    spectra: NDArray[np.complex128] = fft.rfft(padded, axis=1)
+    if first >= 0:
+        return spectra[:, first:stop]
+    return np.concatenate([spectra[:, 1:2].conj(), spectra[:, :stop]], axis=1)
