@@ -19,7 +19,7 @@ import pytest  # noqa: E402
 from hypothesis import settings  # noqa: E402
 
 LAYERS = ("core", "reference", "process")
-PROCESS_FOLDERS = frozenset({"process", "supervise", "browser"})
+PROCESS_FOLDERS = frozenset({"process", "supervise", "pipeline", "browser"})
 HERE = Path(__file__).parent
 
 settings.register_profile("house", deadline=None, print_blob=True)  # no deadline: the machine may be busy
