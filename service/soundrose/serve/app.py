@@ -1,99 +1,122 @@
 """codec: the HTTP application: answers made from the newest messages, without sockets or clocks of its own."""
 
 from collections.abc import Callable
-from dataclasses import dataclass
 from typing import Any
 
 from fastapi import FastAPI
-from fastapi.responses import HTMLResponse, JSONResponse
+from fastapi.responses import JSONResponse
+from starlette.types import ASGIApp
 
 from soundrose._version import __version__
-from soundrose.product.codec import rfc3339
 from soundrose.product.messages import VERSION
-from soundrose.serve.latest import Latest, Message, not_ready
+from soundrose.serve.guard import Guard
+from soundrose.serve.latest import not_ready
+from soundrose.serve.limits import Allowance, Headed, Limited
+from soundrose.serve.map_calls import add_array, add_maps
+from soundrose.serve.pages import add_pages
+from soundrose.serve.plain import plain
 from soundrose.serve.problems import Problem, install_problems
-from soundrose.settings_types import Settings
+from soundrose.serve.shapes import (
+    HEALTH_EXAMPLE,
+    LEVELS_EXAMPLE,
+    STATUS_EXAMPLE,
+    HealthAnswer,
+    LevelsAnswer,
+    LiveAnswer,
+    StatusAnswer,
+    problems,
+    with_example,
+)
+from soundrose.serve.source import Source, newest
+from soundrose.serve.work import Workshop
 
-__all__ = ["Source", "make_app", "plain"]
+__all__ = ["Source", "dress", "make_app", "plain"]
 
-_PAGE = """<!doctype html>
-<html lang="en"><head><meta charset="utf-8"><title>soundrose</title></head>
-<body>
-<h1>soundrose {version}</h1>
-<p>Array {array}: <a href="/api/v1/status">status</a>, <a href="/readyz">readiness</a>,
-<a href="/docs">every call</a>.</p>
-<p>Not a navigation or collision-avoidance aid. Absence of detection is not absence of an animal or a vessel; sounds
-outside the bands ({bands}) are not heard at all. Decisions on mitigation are for qualified observers under the permit
-and local rules in force. Levels are as good as the calibration entered. A line array cannot tell port from
-starboard.</p>
-</body></html>
-"""
-
-
-@dataclass(frozen=True, slots=True)
-class Source:
-    """What the application answers from. now : host monotonic clock, seconds."""
-
-    settings: Settings
-    latest: Latest
-    now: Callable[[], float]
+_ABOUT = (
+    "Frequency-bearing maps, hydrophone health and status of one hydrophone array. Readers ignore keys they do not "
+    "know and treat an unknown word of an enumeration as 'other'. Not a navigation or collision-avoidance aid."
+)
 
 
-def plain(message: Message) -> dict[str, Any]:
-    """A published map as a JSON object: its keys, and RFC 3339 texts beside integer nanoseconds."""
-    header = dict(message.header)
-    for key, text in (("t", "time"), ("t_end", "time_end"), ("service_start", "service_start_time")):
-        if isinstance(header.get(key), int):
-            header[text] = rfc3339(header[key])
-    return header
+def make_app(source: Source, workshop: Workshop | None = None) -> FastAPI:
+    """The application for one service; `dress` puts guard and limits around it.
 
-
-def make_app(source: Source) -> FastAPI:
-    """The application for one service."""
+    workshop : where answers are made; one of its own if not given.
+    """
     app = FastAPI(
         title="soundrose",
         version=__version__,
-        description="Frequency-bearing maps, hydrophone health and status of one hydrophone array.",
+        summary="Real-time beamforming of a hydrophone line array",
+        description=_ABOUT,
+        docs_url=None,  # theirs load scripts from elsewhere; there is no network aboard
+        redoc_url=None,
+        redirect_slashes=False,
+        separate_input_output_schemas=False,
     )
+    workshop = workshop or Workshop()
     install_problems(app)
-    _add_state_calls(app, source)
-    _add_page(app, source)
+    _add_watch_calls(app, source)
+    _add_topic_calls(app, source)
+    add_maps(app, source, workshop)
+    add_array(app, source, workshop)
+    add_pages(app, source.settings)
     return app
 
 
-def _newest(source: Source, topic: str) -> Message:
-    message = source.latest.get(topic)
-    if message is None:
-        raise Problem(503, f"no {topic} message has come yet; ask again", headers={"Retry-After": "1"})
-    return message
+def dress(app: ASGIApp, hosts: frozenset[str], now: Callable[[], float], allowance: Allowance | None = None) -> ASGIApp:
+    """The application as clients meet it: security headers on every answer, then limits, then the guard.
+
+    hosts : values of Host that are ours (`host_names`).  now : monotonic clock, seconds.
+    """
+    return Headed(Limited(Guard(app, hosts), now, allowance or Allowance()))
 
 
-def _add_state_calls(app: FastAPI, source: Source) -> None:
-    @app.get("/livez", summary="This process answers")
-    async def livez() -> dict[str, str]:
-        return {"status": "ok"}
+def _add_watch_calls(app: FastAPI, source: Source) -> None:
+    ok = with_example({"status": "ok"}, "Yes")
 
-    @app.get("/readyz", summary="Every process is up and the feed and publish addresses are bound")
+    @app.get(
+        "/livez", operation_id="get_livez", summary="This process answers", response_model=LiveAnswer,
+        responses={200: ok, **problems()},
+    )  # fmt: skip
+    async def livez() -> JSONResponse:
+        return JSONResponse({"status": "ok"})
+
+    @app.get(
+        "/readyz", operation_id="get_readyz", response_model=LiveAnswer,
+        summary="Every process is up and the feed and publish addresses are bound",
+        responses={200: ok, **problems(s503="Not ready; `not_ready` names what is not up.")},
+    )  # fmt: skip
     async def readyz() -> JSONResponse:
         names = not_ready(source.latest.get("status"), source.now())
         if names:
             raise Problem(503, f"not ready: {', '.join(names)}", headers={"Retry-After": "1"}, not_ready=names)
         return JSONResponse({"status": "ok"})
 
-    @app.get("/api/v1/status", summary="The newest status message")
-    async def status() -> dict[str, Any]:
-        return {**plain(_newest(source, "status")), "version": __version__, "versions": [VERSION]}
 
-    @app.get("/api/v1/health", summary="The newest health message")
-    async def health() -> dict[str, Any]:
-        return plain(_newest(source, "health"))
+def _add_topic_calls(app: FastAPI, source: Source) -> None:
+    """The newest message of a topic, as it is."""
+
+    @app.get(
+        "/api/v1/status", operation_id="get_status", summary="The newest status message", response_model=StatusAnswer,
+        responses={200: with_example(STATUS_EXAMPLE, "Status, with versions"), **problems()},
+    )  # fmt: skip
+    async def status() -> JSONResponse:
+        return _json({**plain(newest(source, "status").header), "version": __version__, "versions": [VERSION]})
+
+    @app.get(
+        "/api/v1/health", operation_id="get_health", summary="The newest state of every hydrophone",
+        response_model=HealthAnswer, responses={200: with_example(HEALTH_EXAMPLE, "Health"), **problems()},
+    )  # fmt: skip
+    async def health() -> JSONResponse:
+        return _json(plain(newest(source, "health").header))
+
+    @app.get(
+        "/api/v1/levels", operation_id="get_levels", summary="The newest decidecade levels of the array average",
+        response_model=LevelsAnswer, responses={200: with_example(LEVELS_EXAMPLE, "Levels"), **problems()},
+    )  # fmt: skip
+    async def levels() -> JSONResponse:
+        return _json(plain(newest(source, "levels").header))
 
 
-def _add_page(app: FastAPI, source: Source) -> None:
-    settings = source.settings
-    bands = ", ".join(f"{band.band_hz[0]:g} to {band.band_hz[1]:g} Hz" for band in settings.bands)
-    page = _PAGE.format(version=__version__, array=settings.array.id, bands=bands)
-
-    @app.get("/", response_class=HTMLResponse, include_in_schema=False)
-    async def root() -> str:
-        return page
+def _json(answer: dict[str, Any]) -> JSONResponse:
+    return JSONResponse(answer)

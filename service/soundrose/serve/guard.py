@@ -4,10 +4,11 @@ from collections.abc import Iterable
 
 from starlette.types import ASGIApp, Receive, Scope, Send
 
-from soundrose.serve.problems import problem_response
+from soundrose.serve.problems import refuse
 
 __all__ = ["Guard", "host_names"]
 
+SHOWN = 120  #: characters of a header that an answer repeats
 _LOOPBACK = ("localhost", "127.0.0.1", "[::1]")
 
 
@@ -43,11 +44,8 @@ class Guard:
         fault = self._fault(scope)
         if fault is None:
             await self._app(scope, receive, send)
-        elif scope["type"] == "websocket":
-            await receive()
-            await send({"type": "websocket.close", "code": 1008, "reason": fault[:120]})  # before accept: HTTP 403
         else:
-            await problem_response(403, fault)(scope, receive, send)
+            await refuse(scope, receive, send, 403, fault)
 
     def _fault(self, scope: Scope) -> str | None:
         headers: dict[bytes, list[str]] = {}
@@ -55,12 +53,16 @@ class Guard:
             headers.setdefault(name, []).append(value.decode("latin-1"))
         hosts = headers.get(b"host", [])
         if len(hosts) != 1 or hosts[0].lower() not in self._hosts:
-            return f"Host is {', '.join(hosts) or 'missing'}; this service answers to {', '.join(sorted(self._hosts))}"
+            return f"Host is {_shown(hosts)}; this service answers to {', '.join(sorted(self._hosts))}"
         for origin in headers.get(b"origin", []):
             if origin.lower() not in (f"http://{hosts[0].lower()}", f"https://{hosts[0].lower()}"):
-                return f"Origin is {origin}; only pages from this service itself ({hosts[0]}) may ask"
-        if scope["type"] == "http" and scope["method"] not in ("GET", "HEAD", "OPTIONS"):
+                return f"Origin is {origin[:SHOWN]}; only pages from this service itself ({hosts[0]}) may ask"
+        if scope["type"] == "http" and scope["method"] == "POST":
             kinds = [kind.split(";")[0].strip().lower() for kind in headers.get(b"content-type", [])]
             if kinds != ["application/json"]:
-                return f"Content-Type is {', '.join(kinds) or 'missing'}; send application/json"
+                return f"Content-Type is {_shown(kinds)}; send application/json"
         return None
+
+
+def _shown(values: list[str]) -> str:
+    return ", ".join(values)[:SHOWN] or "missing"

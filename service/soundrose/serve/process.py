@@ -15,11 +15,12 @@ from soundrose.child import HEARTBEAT_S, Heartbeat, Lifeline, Orders, SlowLog, s
 from soundrose.errors import StartError, WireError
 from soundrose.product.addresses import connect_address
 from soundrose.product.codec import decode_published
-from soundrose.serve.app import Source, make_app
+from soundrose.serve.app import Source, dress, make_app
 from soundrose.serve.commands import CommandClient
 from soundrose.serve.event_calls import add_events
 from soundrose.serve.events import EventTap
-from soundrose.serve.guard import Guard, host_names
+from soundrose.serve.guard import host_names
+from soundrose.serve.http11 import server_options
 from soundrose.serve.latest import Latest, Message, not_ready
 from soundrose.serve.live import add_live
 from soundrose.serve.metrics import add_metrics
@@ -98,11 +99,8 @@ async def _serve(orders: Orders, lifeline: Lifeline, listener: socket.socket, ho
     add_metrics(app, latest)
     add_live(app, source, tap)
     config = uvicorn.Config(
-        Guard(app, host_names(host, port, _own_names())),
-        log_config=None,
-        log_level="warning",
-        access_log=False,
-        server_header=False,
+        dress(app, host_names(host, port, _own_names()), time.monotonic),
+        **server_options(),
         timeout_graceful_shutdown=_GRACE_S,
         **WEBSOCKET_OPTIONS,
     )
