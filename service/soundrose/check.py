@@ -32,8 +32,8 @@ CAUTIONS = (
 MOST_SCALLOPING_DB = 0.5
 #: y or z offsets beyond this share of the wavelength at the band's top are felt: beams steer along x alone
 OFFSET_SHARE = 1 / 8
-#: share of one core beyond which a band may fall behind
-MOST_LOAD = 0.7
+#: estimated share of a quiet core beyond which a band may fall behind on a busy one
+MOST_LOAD = 0.5
 CONE_ANGLES_DEG = (90, 60, 45, 30, 0)
 FREQUENCIES = 6
 HANN_NOISE_BANDWIDTH = 1.5
@@ -184,7 +184,7 @@ def _band_table(facts: _Facts) -> Table:
     load = f"about {budget.load:.2f}" if budget.load >= 0.01 else "under 0.01"
     memory = f"weights {_bytes(budget.weight_bytes)}, buffers {_bytes(budget.buffer_bytes)}"
     table.add_row("memory", f"about {memory}, besides about 80 MB of the process itself")
-    table.add_row("load", f"{load} of one core: an estimate from operation counts")
+    table.add_row("load", f"{load} of a quiet core: an estimate from operation counts")
     return table
 
 

@@ -12,11 +12,11 @@ from soundrose.errors import UsageError
 
 __all__ = ["Budget", "band_budget", "bin_range", "weight_bytes", "why_not_pairs"]
 
-#: multiply-adds per second of one ordinary core in single precision, and its rate in passes bound by memory: chosen so
-#: that the estimate lies within a fifth of the times measured on a busy two-core x86 machine for 48, 64 and 128
-#: hydrophones, pairs and general (4.6, 22, 58 and 59 ms a frame)
-PRODUCT_PER_S = 4e9
-PASSES_PER_S = 5e8
+#: multiply-adds per second of one ordinary core in single precision, and its rate in passes bound by memory. Fitted to
+#: the shortest of 40 frames on a two-core x86 machine: 48 hydrophones 1.9 ms, 64 7.1 ms (general kernel 23 ms), 128
+#: 19 ms; the estimate lies within a quarter of each. Beside other work on the machine, medians were up to 3 times longer
+PRODUCT_PER_S = 1e10
+PASSES_PER_S = 2e9
 #: frames a band worker keeps at once besides its weights: input, spectra, chunk buffers
 FRAMES_KEPT = 4
 
@@ -58,7 +58,7 @@ class Budget:
 
     weight_bytes, buffer_bytes : in the band's process, besides about 80 MB of the interpreter and its libraries.
     operations : multiply-adds per frame (transform, product, power and taper).
-    load : processing time over real time on one ordinary core.
+    load : processing time over real time on one ordinary core with nothing else to do.
     """
 
     weight_bytes: int
