@@ -14,7 +14,7 @@ __all__ = ["Budget", "band_budget", "bin_range", "weight_bytes", "why_not_pairs"
 
 #: multiply-adds per second of one ordinary core in single precision, and its rate in passes bound by memory. Fitted to
 #: the shortest of 40 frames on a two-core x86 machine: 48 hydrophones 1.9 ms, 64 7.1 ms (general kernel 23 ms), 128
-#: 19 ms; the estimate lies within a quarter of each. Beside other work, medians were up to 3 times longer
+#: 19 ms; the estimate lies within a third of each. Beside other work, medians were up to 3 times longer
 PRODUCT_PER_S = 1e10
 PASSES_PER_S = 2e9
 #: frames a band worker keeps at once besides its weights: input, spectra, chunk buffers
