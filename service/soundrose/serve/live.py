@@ -18,7 +18,7 @@ from soundrose.serve.live_hub import CLIENTS_MOST, Hub
 from soundrose.serve.live_request import REQUEST_MOST_BYTES, LiveRequest, parse_request
 from soundrose.serve.mailbox import EVENTS_MOST
 from soundrose.serve.problems import Problem
-from soundrose.serve.websocket import CANNOT_KEEP_UP, CLOSE_S, LINK, Link
+from soundrose.serve.websocket import CANNOT_KEEP_UP, LINGER_S, LINK, Link
 from soundrose.store.cursors import BEGIN
 
 __all__ = ["PATH", "PROTOCOL", "Log", "add_live"]
@@ -126,7 +126,7 @@ class _Connection:
             await self._send({"type": "websocket.close", "code": closing.code, "reason": closing.reason})
         if self._link is not None:
             with contextlib.suppress(TimeoutError):
-                await asyncio.wait_for(self._link.gone.wait(), CLOSE_S + 1)
+                await asyncio.wait_for(self._link.gone.wait(), LINGER_S + 1)
 
     async def _write(self) -> None:
         while True:
