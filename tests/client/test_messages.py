@@ -149,6 +149,13 @@ def test_frames_that_are_no_message_give_their_reason(parts, reason):
     assert caught.value.reason == reason
 
 
+@pytest.mark.parametrize("data", [b"", bytes(44), bytes(47), bytes(49), bytes(52), bytes(96)])
+def test_map_with_too_few_or_too_many_bytes_is_refused(make_map, data):
+    """3 x 4 levels of 4 bytes are 48."""
+    with pytest.raises(MessageError, match="bytes"):
+        decode([*make_map()[:2], data])
+
+
 def test_message_error_survives_pickling():
     error = pickle.loads(pickle.dumps(MessageError("shape", "why")))
     assert (error.reason, error.detail, str(error), error.code) == ("shape", "why", "shape: why", "message")

@@ -63,6 +63,14 @@ def test_lost_samples_leave_a_gap_in_the_index_and_time_goes_on(pull):
     assert (header["first"], header["t"]) == (100, 100_000_005)
 
 
+def test_time_given_anew_goes_on_from_there(pull):
+    with Source("aft", 1000.0, address_of(pull)) as source:
+        for t_ns in (1_000, 7_000_000_000, None):
+            source.send(np.zeros((1, 10), np.int16), t_ns=t_ns)
+        times = [receive(pull)[0]["t"] for _ in range(3)]
+    assert times == [1_000, 7_000_000_000, 7_010_000_000]
+
+
 def test_end_begins_a_new_run_with_the_next_samples(pull):
     with Source("aft", 1000.0, address_of(pull), run="day") as source:
         for _ in range(3):
