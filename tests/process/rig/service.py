@@ -25,10 +25,15 @@ MARK = "PROCESS_TEST_MARK"  # set in the environment of the service; its childre
 ROOT = Path(__file__).resolve().parents[3]
 
 
-def _environment(mark: str) -> dict[str, str]:
-    """As it is here, with the package on the path: SERVICE_PYTHONPATH where set (a changed copy), else the repo's."""
+def _environment(mark: str, extra_path: Path | None = None) -> dict[str, str]:
+    """As it is here, with the package on the path: SERVICE_PYTHONPATH where set (a changed copy), else the repo's.
+
+    extra_path : a folder that comes before it.
+    """
     ours = os.pathsep.join([str(ROOT / "service"), str(ROOT / "clients" / "python")])
     path = os.environ.get("SERVICE_PYTHONPATH") or ours
+    if extra_path is not None:
+        path = f"{extra_path}{os.pathsep}{path}"
     return {**os.environ, "PYTHONPATH": path, MARK: mark, "PYTHONUNBUFFERED": "1"}
 
 
@@ -80,7 +85,9 @@ def http_get(url: str, headers: dict[str, str] | None = None) -> tuple[int, dict
 class Service:
     """`soundrose run` on its own ports. `ready` is its ready line; use as a context, which ends it in order."""
 
-    def __init__(self, settings: dict[str, Any], folder: Path, deadline_s: float = 40.0) -> None:
+    def __init__(
+        self, settings: dict[str, Any], folder: Path, deadline_s: float = 40.0, extra_path: Path | None = None
+    ) -> None:
         folder.mkdir(parents=True, exist_ok=True)
         self.folder, self.mark = folder, uuid.uuid4().hex
         self.config = folder / "aft.toml"
@@ -88,7 +95,7 @@ class Service:
         self._error_file = (folder / "stderr.txt").open("wb")
         self.process = subprocess.Popen(
             [sys.executable, "-m", "soundrose", "run", "--config", str(self.config)], cwd=folder,
-            env=_environment(self.mark), stdin=subprocess.DEVNULL, stdout=subprocess.PIPE, stderr=self._error_file,
+            env=_environment(self.mark, extra_path), stdin=subprocess.DEVNULL, stdout=subprocess.PIPE, stderr=self._error_file,
             start_new_session=True,
         )  # fmt: skip
         self._lines: queue.Queue[str | None] = queue.Queue()
