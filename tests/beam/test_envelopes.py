@@ -3,6 +3,7 @@
 import numpy as np
 import pytest
 from plane_waves import RATE, T0, hops, line, settings_for
+
 from soundrose.array.geometry import cos_grid
 from soundrose.beam.envelopes import EnvelopeBank, EnvelopeFrame
 from soundrose.beam.powers import PowerFrame, PowerReducer

@@ -3,6 +3,7 @@
 import numpy as np
 import pytest
 from plane_waves import RATE, T0, hop, hops, line, noise_spectrum, on_line, settings_for
+
 from soundrose.beam.series import BeamSeries
 from soundrose.errors import UsageError
 

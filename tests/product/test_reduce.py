@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+
 from soundrose.errors import UsageError
 from soundrose.product.reduce import group_size, reduce_levels, reduce_power
 
