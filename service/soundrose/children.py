@@ -15,9 +15,9 @@ __all__ = ["STUCK_S", "Child", "ChildState", "back_off_s"]
 
 ChildState = Literal["starting", "up", "down"]
 
-STUCK_S = 3.0  #: no beat for this long after the first: the child is stuck, and is ended and started anew
+STUCK_S = 2.0  #: no beat for this long after the first: the child is stuck, and is ended and started anew
 START_S = 60.0  #: a child that has not sent its first ready beat by then is started anew
-_STEADY_S = 60.0  #: up this long: the next failure is a first one again
+_STEADY_S = 10.0  #: up this long: the next failure is a first one again
 _BACK_OFF_MOST_S = 30.0
 
 

@@ -5,7 +5,6 @@ from math import acos, ceil, copysign, degrees, log10, pi
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import brentq, minimize_scalar
 
 from soundrose.array.geometry import TOLERANCE_M, band_geometry
 from soundrose.array.shading import shading_weights
@@ -74,6 +73,8 @@ class Line:
         """
         if not 0 < power < 1:
             raise UsageError(f"power is {power!r}; it must be above 0 and below 1")
+        from scipy.optimize import brentq  # here, because loading it delays the start of what seldom needs it
+
         length = self._weighted_length()
         if length <= TOLERANCE_M:
             return None
@@ -116,6 +117,8 @@ class Line:
 
         For equal spacing 1/(2 spacing) covers the whole pattern once; above it the images begin.
         """
+        from scipy.optimize import minimize_scalar  # here for the same reason as above
+
         length = self._weighted_length()
         v = np.arange(0, ceil(v_max * length * POINTS) + 1) / (POINTS * max(length, TOLERANCE_M))
         v = np.append(v[v < v_max], v_max)

@@ -6,7 +6,6 @@ from math import acosh, ceil, pi
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.signal import windows
 
 from soundrose.array.geometry import TOLERANCE_M, Geometry
 from soundrose.errors import UsageError
@@ -110,6 +109,8 @@ def _named(shading: ShadingName, geometry: Geometry, shading_db: float) -> NDArr
 def _chebyshev(geometry: Geometry, shading_db: float) -> NDArray[np.float64]:
     if geometry.spacing_m is None:
         raise UsageError("shading 'chebyshev' needs equal spacing along x; this line has none: use taylor or hann")
+    from scipy.signal import windows  # here, because loading it takes longer than all else that a band needs
+
     weights = np.empty(len(geometry.channels))
     with warnings.catch_warnings():
         # scipy warns below 45 dB that spectral analysis wants more; along an array 25 to 40 dB is what is wanted
