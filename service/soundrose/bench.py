@@ -36,7 +36,7 @@ def run_bench(json: bool, console: Console) -> int:
         for load in LOADS:
             if not json:
                 console.print(f"[dim]{_title(load)} ...[/dim]")
-            results.append(measure(load))
+            results.append(measure(load, ROUNDS))
     if json:
         console.out(json_text.dumps({"machine": facts, "loads": results}, indent=1), highlight=False)
     else:
@@ -58,7 +58,7 @@ def machine_facts() -> dict[str, Any]:
     }
 
 
-def measure(load: Load, rounds: int = ROUNDS) -> dict[str, Any]:
+def measure(load: Load, rounds: int) -> dict[str, Any]:
     """Medians of one load, milliseconds per hop (half a frame).
 
     `beam_ms` runs from the transform to the averaged power; `frames_ms` is copying and bookkeeping, `levels_ms` the map
