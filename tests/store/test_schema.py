@@ -89,6 +89,12 @@ def test_a_newer_file_is_refused_and_left_alone(tmp_path):
     with pytest.raises(StartError, match=rf"version {VERSION + 1}; this program knows versions up to {VERSION}"):
         opened(tmp_path).__enter__()
     assert [name for name in os.listdir(tmp_path) if "damaged" in name] == []
+    connection = sqlite3.connect(path)
+    connection.execute(f"PRAGMA user_version={VERSION}")
+    connection.close()
+    with opened(tmp_path) as log:  # the refusal has let go of everything
+        flush(log)
+        assert len(everything(tmp_path)) == 4
 
 
 def test_another_programs_file_is_refused_and_left_alone(tmp_path):

@@ -91,7 +91,11 @@ class EventLog:
         self._file: LogFile | None = None
         self._lock_fd = -1
         self._kept: dict[str, Any] = {}
-        self._try_open()
+        try:
+            self._try_open()
+        except StartError:
+            self._unlock()
+            raise
         self._thread = threading.Thread(target=self._write_on, name="event log", daemon=True)
         self._thread.start()
 
@@ -168,9 +172,7 @@ class EventLog:
         if self._file is not None:
             self._file.close()
             self._file = None
-        if self._lock_fd >= 0:
-            os.close(self._lock_fd)
-            self._lock_fd = -1
+        self._unlock()
 
     # ---- the writer's thread ----
 
@@ -257,6 +259,11 @@ class EventLog:
                 f"store.path: another service writes the event log {self._path}. End it, or choose another store.path."
             ) from None
         self._lock_fd = descriptor
+
+    def _unlock(self) -> None:
+        if self._lock_fd >= 0:
+            os.close(self._lock_fd)
+            self._lock_fd = -1
 
     def _write(self, batch: list[Entry]) -> bool:
         assert self._file is not None
