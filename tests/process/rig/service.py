@@ -95,7 +95,8 @@ class Service:
         self._error_file = (folder / "stderr.txt").open("wb")
         self.process = subprocess.Popen(
             [sys.executable, "-m", "soundrose", "run", "--config", str(self.config)], cwd=folder,
-            env=_environment(self.mark, extra_path), stdin=subprocess.DEVNULL, stdout=subprocess.PIPE, stderr=self._error_file,
+            env=_environment(self.mark, extra_path), stdin=subprocess.DEVNULL, stdout=subprocess.PIPE,
+            stderr=self._error_file,
             start_new_session=True,
         )  # fmt: skip
         self._lines: queue.Queue[str | None] = queue.Queue()
