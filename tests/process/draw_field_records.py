@@ -53,7 +53,7 @@ def draw_maps(maps: dict[int, Message]) -> None:
     for axes in rows[:, 0]:
         axes.set_ylabel("cosine, steered at 140 m/s")
     figure.colorbar(mesh, ax=rows, label="level re the loudest cell, dB", shrink=0.8)
-    save(figure, "field-maps.png", dpi=72)
+    save(figure, "field-maps.png", dpi=70)
 
 
 def draw_shares(maps: dict[int, Message]) -> None:
