@@ -11,7 +11,7 @@ from soundrose.beam.stage import BandStage, Sink
 from soundrose.errors import UsageError
 
 FRAME, BEAM = 1024, 4
-BANDS = [(1000.0, 1200.0), (1500.0, 1800.0)]
+BANDS = [(1000.0, 1230.0), (1500.0, 1800.0)]
 SETTINGS = settings_for(line(16), frame=FRAME, beams=17, band_hz=(500.0, 3000.0))
 BINS = (32, 193)
 U = cos_grid(17)[BEAM]
