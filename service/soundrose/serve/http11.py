@@ -2,6 +2,8 @@
 
 import asyncio
 import json
+import sys
+from http import HTTPStatus
 from typing import Any
 
 import h11
@@ -16,6 +18,12 @@ HEAD_BYTES = 16 * 1024  #: of request line and headers together
 HEAD_S = 10.0  #: from the first byte of a request, or from the connection, to the end of its headers
 SEND_S = 30.0  #: for a client to take what has been sent: one that has not is cut off
 IDLE_S = 15  #: between two requests on one connection
+
+_WHY = {
+    400: "this is not HTTP/1.1",
+    431: f"request line and headers are over {HEAD_BYTES} bytes",
+    501: "a body may come whole or in chunks; no other transfer coding is known",
+}
 
 
 class PatientProtocol(H11Protocol):
@@ -56,14 +64,18 @@ class PatientProtocol(H11Protocol):
         if self.conn.our_state not in (h11.IDLE, h11.SEND_RESPONSE):
             self.transport.close()  # in the middle of an answer: there is no place for another
             return
-        detail = f"this is not HTTP/1.1, or its request line and headers are over {HEAD_BYTES} bytes"
-        body = json.dumps(problem_body(400, detail)).encode()
+        error = sys.exc_info()[1]  # of h11, which knows more than its caller hands on
+        status = error.error_status_hint if isinstance(error, h11.RemoteProtocolError) else 400
+        body = json.dumps(problem_body(status, _WHY.get(status, _WHY[400]))).encode()
         headers = [
-            ("content-type", MEDIA_TYPE), ("content-length", str(len(body))), ("connection", "close"),
-            ("x-content-type-options", "nosniff"), ("cache-control", "no-store"),
-        ]  # fmt: skip
+            ("content-type", MEDIA_TYPE),
+            ("content-length", str(len(body))),
+            ("connection", "close"),
+            ("x-content-type-options", "nosniff"),
+            ("cache-control", "no-store"),
+        ]
         for event in (
-            h11.Response(status_code=400, headers=headers, reason="Bad Request"),
+            h11.Response(status_code=status, headers=headers, reason=HTTPStatus(status).phrase),
             h11.Data(data=body),
             h11.EndOfMessage(),
         ):

@@ -34,12 +34,14 @@ _SAFE = frozenset({"GET", "HEAD", "OPTIONS"})
 @dataclass(frozen=True, slots=True)
 class Allowance:
     """rate, burst : requests a second and at once, per client address. at_once, at_once_each : being answered, in all
-    and per address. body_bytes, body_s : of a request. addresses : remembered."""
+    and per address. head_bytes : of request line and headers. body_bytes, body_s : of a body. addresses :
+    remembered."""
 
     rate: float = 200.0
     burst: float = 400.0
     at_once: int = 128
     at_once_each: int = 64
+    head_bytes: int = 16 * 1024
     body_bytes: int = 64 * 1024
     body_s: float = 10.0
     addresses: int = 1024
@@ -77,16 +79,26 @@ class Limited:
         self._all = 0
 
     async def __call__(self, scope: Scope, receive: Receive, send: Send) -> None:
-        if scope["type"] not in ("http", "websocket") or scope["path"] in _FREE:
+        if scope["type"] not in ("http", "websocket"):
             await self._app(scope, receive, send)
             return
+        if scope["http_version"] not in ("1.0", "1.1"):
+            await refuse(scope, receive, send, 505, f"this is HTTP/{scope['http_version']}; HTTP/1.1 is spoken", _CLOSE)
+            return
+        if _head_bytes(scope) > self._allowance.head_bytes:
+            detail = f"request line and headers are over {self._allowance.head_bytes} bytes"
+            await refuse(scope, receive, send, 431, detail, _CLOSE)
+            return
         address = scope["client"][0] if scope.get("client") else ""
-        if wait := self._buckets.take(address, self._now()):
+        free = scope["path"] in _FREE
+        if not free and (wait := self._buckets.take(address, self._now())):
             allowed = f"{self._allowance.rate:g} requests a second and {self._allowance.burst:g} at once"
             retry = {"Retry-After": str(ceil(wait))}
             await refuse(scope, receive, send, 429, f"more than {allowed} from one address; ask less often", retry)
         elif scope["type"] == "websocket":
             await self._app(scope, receive, send)
+        elif free:
+            await self._with_body(scope, receive, send)
         else:
             await self._counted(address, scope, receive, send)
 
@@ -132,6 +144,12 @@ class Limited:
 
 
 _CLOSE = {"Connection": "close"}
+
+
+def _head_bytes(scope: Scope) -> int:
+    """About the bytes that came: names, values and target, with their separators."""
+    headers = sum(len(name) + len(value) + 4 for name, value in scope["headers"])
+    return headers + len(scope.get("raw_path") or b"") + len(scope["query_string"])
 
 
 async def _read(receive: Receive, most: int) -> bytes | None:

@@ -7,7 +7,7 @@ from fastapi import FastAPI, Query, Request, Response
 from pydantic import AfterValidator, Field
 from pydantic_core import to_json
 
-from soundrose.errors import UsageError
+from soundrose.errors import UsageError, WireError
 from soundrose.product.reduce import Pick
 from soundrose.serve.array_page import array_answer, band_line, channels_out
 from soundrose.serve.conditional import is_known, reduction_tag
@@ -151,6 +151,8 @@ async def _answer(request: Request, workshop: Workshop, tag: str, key: str, work
         answer = await workshop.make(key, work)
     except UsageError as error:
         raise Problem(422, str(error)) from None
+    except WireError as error:
+        raise Problem(503, f"the newest map cannot be read: {error}", headers={"Retry-After": "1"}) from None
     return Response(answer.body, media_type=answer.media_type, headers={**headers, **answer.headers})
 
 

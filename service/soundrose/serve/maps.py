@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 from pydantic_core import to_json
 
-from soundrose.errors import UsageError
+from soundrose.errors import UsageError, WireError
 from soundrose.product.reduce import Pick, ReducedMap, reduce_levels
 from soundrose.serve.conditional import reduction_tag
 from soundrose.serve.latest import Message
@@ -68,11 +68,11 @@ class MapAsk:
 
 
 def levels_of(message: Message) -> NDArray[np.float32]:
-    """(beams, bins) float32 of a published map, dB; shares its memory. UsageError where data and shape disagree."""
+    """(beams, bins) float32 of a published map, dB; shares its memory. WireError where data and shape disagree."""
     shape = tuple(message.header["shape"])
     data = b"" if message.data is None else message.data
     if len(shape) != 2 or len(memoryview(data).cast("B")) != 4 * shape[0] * shape[1]:
-        raise UsageError(f"a map of shape {shape} came with {len(data)} bytes; it must have 4 for each value")
+        raise WireError("published", f"a map of shape {shape} came with {len(data)} bytes; 4 for each value are due")
     return np.frombuffer(data, "<f4").reshape(shape)
 
 
