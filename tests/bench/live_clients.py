@@ -133,6 +133,7 @@ class RawClient:
         try:
             while data := self._socket.recv(1 << 16):
                 self._protocol.receive_data(data)
+                self._flush()  # the answer to a close frame
         except OSError:
             pass
         maps = [e for e in self._protocol.events_received() if isinstance(e, Frame) and e.opcode is Opcode.BINARY]
@@ -227,8 +228,9 @@ def _measure(arguments: argparse.Namespace, address: str, pid: int) -> dict[str,
     for thread in threads:
         thread.join()
     codes = {"silent": _count(slow), "trickle": _count(trickling)}
+    over = loaded["age_ms"]["p99"] - alone["age_ms"]["p99"]
     return {
-        "alone": alone, "loaded": loaded, "p99_over_alone_ms": round(loaded["age_ms"]["p99"] - alone["age_ms"]["p99"], 1),
+        "alone": alone, "loaded": loaded, "p99_over_alone_ms": round(over, 1),
         "serve_cores": round(share, 3), "memory_before_mb": before, "memory_after_mb": after, "close_codes": codes,
         "maps_to_silent": sum(c.maps for c in slow) / max(len(slow), 1), "cores": os.cpu_count(),
         "load": os.getloadavg()[0],

@@ -20,6 +20,7 @@ LINK = "soundrose.link"  #: name of the ASGI extension that carries the Link
 PING_S = 10.0  #: a ping this often; the answer is waited for as long
 CLOSE_S = 10.0  #: wait for the peer's side of the closing handshake
 LINGER_S = 60.0  #: the same for a peer that was too slow: it has more to read before it sees why it was closed
+_TCP = (socket.AF_INET, socket.AF_INET6)
 _SEND_BUFFER = 64 * 1024  #: kernel buffer: what lies in it is stale by the time a slow client reads it
 #: At the end: room for what is left and the close frame. Linux grants this much by default, and takes more data only
 #: when a third of a buffer is free: with the one above at 128 KiB, 8 of 20 clients that did not read missed their code.
@@ -61,7 +62,9 @@ class LiveProtocol(WebSocketsSansIOProtocol):
     def connection_made(self, transport: BaseTransport) -> None:
         super().connection_made(transport)
         self.transport.set_write_buffer_limits(high=0)  # `writable` means that everything sent is in the kernel
-        self._kernel_buffer(_SEND_BUFFER)
+        self._set_option(socket.SOL_SOCKET, socket.SO_SNDBUF, _SEND_BUFFER)
+        # asyncio does it for sockets that say they are TCP; accepted ones do not, and a second event waited for 40 ms
+        self._set_option(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
 
     def connection_lost(self, exc: Exception | None) -> None:
         super().connection_lost(exc)
@@ -75,7 +78,7 @@ class LiveProtocol(WebSocketsSansIOProtocol):
     async def send(self, message: Any) -> None:
         closing = message["type"] == "websocket.close" and self.handshake_complete
         if closing and not (self.close_sent or self.disconnected or self.transport.is_closing()):
-            self._kernel_buffer(_LAST_BUFFER)
+            self._set_option(socket.SOL_SOCKET, socket.SO_SNDBUF, _LAST_BUFFER)
             self.writable.set()  # nothing but the close frame is sent any more, and that must not wait for a reader
             await super().send(message)
             self._await_end(message.get("code", 1000))
@@ -95,7 +98,7 @@ class LiveProtocol(WebSocketsSansIOProtocol):
         assert self.conn.close_sent is not None
         code, reason = self.conn.close_sent.code, self.conn.close_sent.reason
         self.queue.put_nowait({"type": "websocket.disconnect", "code": code, "reason": reason})
-        self._kernel_buffer(_LAST_BUFFER)
+        self._set_option(socket.SOL_SOCKET, socket.SO_SNDBUF, _LAST_BUFFER)
         self.transport.write(b"".join(self.conn.data_to_send()))
         self.close_sent = True
         self.stop_keepalive()
@@ -117,10 +120,10 @@ class LiveProtocol(WebSocketsSansIOProtocol):
         else:
             self.transport.close()  # the kernel goes on delivering what it has
 
-    def _kernel_buffer(self, size: int) -> None:
+    def _set_option(self, level: int, option: int, value: int) -> None:
         own = self.transport.get_extra_info("socket")
-        if own is not None and own.family in (socket.AF_INET, socket.AF_INET6):
-            own.setsockopt(socket.SOL_SOCKET, socket.SO_SNDBUF, size)
+        if own is not None and own.family in _TCP:
+            own.setsockopt(level, option, value)
 
 
 #: of uvicorn.Config, for every server that carries the live socket

@@ -1,0 +1,8 @@
+"""Puts this folder on the path, so that tests can share what they run against."""
+
+import sys
+from pathlib import Path
+
+HERE = str(Path(__file__).parent)
+if HERE not in sys.path:
+    sys.path.insert(0, HERE)
