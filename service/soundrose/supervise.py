@@ -211,7 +211,7 @@ class Supervisor:
         elsewhere = [
             {
                 "name": name,
-                "state": "up" if 0 < now - heard < 5.0 else "down",
+                "state": "starting" if heard == 0.0 else "up" if now - heard < 5.0 else "down",
                 "pid": None,
                 "restarts": 0,
                 "since": self._service_start,

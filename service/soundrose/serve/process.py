@@ -64,11 +64,12 @@ async def _collect(subscriber: zmq.asyncio.Socket, latest: Latest) -> None:
 async def _beat(orders: Orders, server: uvicorn.Server, latest: Latest, address: str) -> None:
     context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
     heart = Heartbeat(context, orders.endpoints["control"], orders.name)
+    elsewhere = {f"band:{band.name}" for band in orders.settings.bands if band.place == "elsewhere"}
     try:
         while True:
             status = latest.get("status")
             ready = server.started and status is not None
-            sees_all = ready and not not_ready(status, time.monotonic())
+            sees_all = ready and not set(not_ready(status, time.monotonic())) - elsewhere
             heart.beat(ready=ready, facts={"http": address, "sees_all": sees_all})
             await asyncio.sleep(HEARTBEAT_S / 5 if not sees_all else HEARTBEAT_S)
     finally:

@@ -1,9 +1,11 @@
 """The service as a process: started from a settings file, watched from outside, ended in order, never left behind."""
 
+import contextlib
 import json
 import os
 import queue
 import signal
+import socket
 import subprocess
 import sys
 import threading
@@ -19,7 +21,7 @@ from rig.listener import Listener
 from rig.toml_text import toml_text
 from rig.wire import Feeder
 
-__all__ = ["Service", "http_get", "processes_marked", "run_command", "wait_until"]
+__all__ = ["Service", "free_ports", "http_get", "processes_marked", "run_command", "wait_until"]
 
 MARK = "PROCESS_TEST_MARK"  # set in the environment of the service; its children inherit it
 ROOT = Path(__file__).resolve().parents[3]
@@ -35,6 +37,15 @@ def _environment(mark: str, extra_path: Path | None = None) -> dict[str, str]:
     if extra_path is not None:
         path = f"{extra_path}{os.pathsep}{path}"
     return {**os.environ, "PYTHONPATH": path, MARK: mark, "PYTHONUNBUFFERED": "1"}
+
+
+def free_ports(count: int) -> list[int]:
+    """TCP ports that nobody has just now, for settings that must name them."""
+    with contextlib.ExitStack() as stack:
+        taken = [stack.enter_context(socket.socket()) for _ in range(count)]
+        for one in taken:
+            one.bind(("127.0.0.1", 0))
+        return [one.getsockname()[1] for one in taken]
 
 
 def processes_marked(mark: str) -> dict[int, str]:
@@ -124,6 +135,11 @@ class Service:
         ready = json.loads(line)
         assert ready["ready"] is True, ready
         return ready
+
+    @property
+    def environment(self) -> dict[str, str]:
+        """That of the service, for a process started beside it."""
+        return _environment(self.mark)
 
     @property
     def stderr(self) -> str:
