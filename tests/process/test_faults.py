@@ -4,7 +4,6 @@ The short form; `python tests/process/faults.py` goes through every process with
 """
 
 from collections.abc import Iterator
-from pathlib import Path
 
 import pytest
 from faults import Bench, live_bench
@@ -26,7 +25,7 @@ def bench(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Bench]:
 
 def test_every_process_comes_back_and_its_neighbours_miss_nothing(bench: Bench) -> None:
     """Breaks in a map's samples are flagged (checked in `hurt`), and only the proxy may cost messages."""
-    restarts = {name: 0 for name in bench.names()}
+    restarts = dict.fromkeys(bench.names(), 0)
     for name, fault in TURNS:
         outcome = bench.hurt(name, fault, DEADLINE_S)
         restarts[name] += 1

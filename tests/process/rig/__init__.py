@@ -12,6 +12,6 @@ from rig.wire import Block, Feeder, block_message, cut_blocks, encode_samples, n
 __all__ = [
     "ArrayModel", "Block", "ExactMap", "Feeder", "FramedMap", "Listener", "Message", "Service", "Stretch", "Wave",
     "block_message", "cut_blocks", "encode_samples", "frame_maps", "free_ports", "half_power_width", "http_get",
-    "join_blocks", "line_positions", "noise_spectrum", "note", "pattern_db", "peak_cosine", "plane_wave", "processes_marked",
-    "run_command", "sensor_noise", "tapered_weights", "toml_text", "wait_until",
+    "join_blocks", "line_positions", "noise_spectrum", "note", "pattern_db", "peak_cosine", "plane_wave",
+    "processes_marked", "run_command", "sensor_noise", "tapered_weights", "toml_text", "wait_until",
 ]  # fmt: skip
