@@ -36,7 +36,7 @@ def listen(host: str, port: int) -> socket.socket:
     family = socket.AF_INET6 if ":" in host else socket.AF_INET
     listener = socket.socket(family, socket.SOCK_STREAM)
     listener.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
-    listener.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)  # accepted sockets inherit it; else 40 ms a small write
+    listener.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)  # those accepted inherit it; without, 40 ms a write
     try:
         listener.bind((host, port))
     except OSError as error:
