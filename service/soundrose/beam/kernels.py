@@ -187,10 +187,10 @@ class PairKernel(Kernel):
         for begin in range(0, self.columns, some):
             beams = slice(begin, min(begin + some, self.columns))
             delays = steering.samples(beams, forward)
-            weighted = delay_transforms(delays.ravel(), steering.frame_length, self._kept)
-            weighted = weighted.reshape(*delays.shape, -1) * shading[:, None]
-            cosine[:, beams, :pairs] = weighted.real.transpose(2, 0, 1)
-            sine[:, beams, :pairs] = weighted.imag.transpose(2, 0, 1)
+            gain = np.tile(shading, len(delays))
+            weighted = delay_transforms(delays.ravel(), steering.frame_length, self._kept, gain)
+            turned = weighted.T.reshape(-1, *delays.shape)
+            cosine[:, beams, :pairs], sine[:, beams, :pairs] = turned.real, turned.imag
         return cosine, sine
 
     def _multiply(self, part: NDArray[np.complex64], kept: slice, amplitude: np.float32, out: Floats) -> None:
@@ -235,9 +235,9 @@ class GeneralKernel(Kernel):
         weights = np.zeros((self._kept[1] - self._kept[0], self.beams, terms), dtype=np.float32)
         for beam_i in range(self.beams):
             delays = steering.samples(slice(beam_i, beam_i + 1), slice(None))[0]
-            weighted = delay_transforms(delays, steering.frame_length, self._kept) * steering.weights[:, None]
-            weights[:, beam_i, :channels] = weighted.real.T
-            weights[:, beam_i, channels : 2 * channels] = weighted.imag.T
+            weighted = delay_transforms(delays, steering.frame_length, self._kept, steering.weights).T
+            weights[:, beam_i, :channels] = weighted.real
+            weights[:, beam_i, channels : 2 * channels] = weighted.imag
         return weights
 
     def _multiply(self, part: NDArray[np.complex64], kept: slice, amplitude: np.float32, out: Floats) -> None:

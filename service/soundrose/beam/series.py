@@ -85,7 +85,7 @@ class BeamSeries:
         beams, channels = len(steering.cos), len(steering.x_m)
         weights = np.empty((beams, channels, self.frame_length // 2 + 1), dtype=np.complex64)
         for beam, delays in zip(weights, steering.samples(slice(None), slice(None)), strict=True):
-            beam[:] = delay_transforms(delays, self.frame_length, (0, weights.shape[2])) * steering.weights[:, None]
+            beam[:] = delay_transforms(delays, self.frame_length, (0, weights.shape[2]), steering.weights)
         return weights
 
     def _piece(self, frame: Frame) -> SeriesPiece:

@@ -133,15 +133,17 @@ def delay_filters(delays: NDArray[np.float64]) -> tuple[NDArray[np.intp], NDArra
 
 
 def delay_transforms(
-    delays: NDArray[np.float64], frame_length: int, kept: tuple[int, int]
-) -> NDArray[np.complex128]:  # fmt: skip
+    delays: NDArray[np.float64], frame_length: int, kept: tuple[int, int], gain: NDArray[np.float64] | None = None
+) -> NDArray[np.complex128]:
     """(filters, bins) N-point transforms of the filters, at bins kept[0] .. kept[1]-1.
 
     delays : (filters,) samples; about `BATCH` at once are done best.  kept : from -1 (the conjugate of bin 1) to at
-    most N/2 + 1.
+    most N/2 + 1.  gain : (filters,) factors, None: 1.
     """
     first, stop = kept
     at, taps = delay_filters(delays)
+    if gain is not None:
+        taps *= gain[:, None]
     padded = np.zeros((len(at), frame_length))
     np.put_along_axis(padded, at % frame_length, taps, axis=1)
     spectra: NDArray[np.complex128] = fft.rfft(padded, axis=1)
