@@ -38,7 +38,7 @@ def draw_record(number: int) -> None:
 
 def draw_maps(maps: dict[int, Message]) -> None:
     """The map of each shot, 5 to 80 Hz, level under the loudest cell."""
-    figure, rows = plt.subplots(2, 2, figsize=(7.8, 5.6), layout="constrained", sharex=True, sharey=True)
+    figure, rows = plt.subplots(2, 2, figsize=(7.6, 5.4), layout="constrained", sharex=True, sharey=True)
     for axes, number in zip(rows.flat, SHOTS, strict=True):
         message = maps[number]
         f, u = message.frequencies_hz, message.cosines
