@@ -9,6 +9,7 @@ from starlette.types import ASGIApp
 
 from soundrose._version import __version__
 from soundrose.product.messages import VERSION
+from soundrose.serve.document import install_document
 from soundrose.serve.guard import Guard
 from soundrose.serve.latest import not_ready
 from soundrose.serve.limits import Allowance, Headed, Limited
@@ -60,6 +61,7 @@ def make_app(source: Source, workshop: Workshop | None = None) -> FastAPI:
     add_maps(app, source, workshop)
     add_array(app, source, workshop)
     add_pages(app, source.settings)
+    install_document(app)
     return app
 
 
@@ -76,7 +78,7 @@ def _add_watch_calls(app: FastAPI, source: Source) -> None:
 
     @app.get(
         "/livez", operation_id="get_livez", summary="This process answers", response_model=LiveAnswer,
-        responses={200: ok, **problems()},
+        responses={200: ok},
     )  # fmt: skip
     async def livez() -> JSONResponse:
         return JSONResponse({"status": "ok"})
@@ -98,21 +100,21 @@ def _add_topic_calls(app: FastAPI, source: Source) -> None:
 
     @app.get(
         "/api/v1/status", operation_id="get_status", summary="The newest status message", response_model=StatusAnswer,
-        responses={200: with_example(STATUS_EXAMPLE, "Status, with versions"), **problems()},
+        responses={200: with_example(STATUS_EXAMPLE, "Status, with versions")},
     )  # fmt: skip
     async def status() -> JSONResponse:
         return _json({**plain(newest(source, "status").header), "version": __version__, "versions": [VERSION]})
 
     @app.get(
         "/api/v1/health", operation_id="get_health", summary="The newest state of every hydrophone",
-        response_model=HealthAnswer, responses={200: with_example(HEALTH_EXAMPLE, "Health"), **problems()},
+        response_model=HealthAnswer, responses={200: with_example(HEALTH_EXAMPLE, "Health")},
     )  # fmt: skip
     async def health() -> JSONResponse:
         return _json(plain(newest(source, "health").header))
 
     @app.get(
         "/api/v1/levels", operation_id="get_levels", summary="The newest decidecade levels of the array average",
-        response_model=LevelsAnswer, responses={200: with_example(LEVELS_EXAMPLE, "Levels"), **problems()},
+        response_model=LevelsAnswer, responses={200: with_example(LEVELS_EXAMPLE, "Levels")},
     )  # fmt: skip
     async def levels() -> JSONResponse:
         return _json(plain(newest(source, "levels").header))

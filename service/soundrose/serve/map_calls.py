@@ -122,7 +122,6 @@ def add_array(app: FastAPI, source: Source, workshop: Workshop) -> None:
         responses={
             200: {**with_example(ARRAY_EXAMPLE, "The array as configured"), "model": ArrayAnswer, "headers": _ETAG},
             **_NOT_MODIFIED,
-            **problems(),
         },
     )
     async def get_array(request: Request) -> Response:

@@ -75,12 +75,12 @@ def calls_page(document: Mapping[str, Any]) -> str:
     parts.append('<p>The same for programs: <a href="/openapi.json">openapi.json</a>. <a href="/">Start page</a></p>')
     for path, item in sorted(document["paths"].items()):
         for method, call in item.items():
-            parts.append(_call(method.upper(), path, call))
+            parts.append(_call(method.upper(), path, call, document))
     return _page("soundrose: every call", "\n".join(parts))
 
 
-def _call(method: str, path: str, call: Mapping[str, Any]) -> str:
-    rows = [_parameter(parameter) for parameter in call.get("parameters", ())]
+def _call(method: str, path: str, call: Mapping[str, Any], document: Mapping[str, Any]) -> str:
+    rows = [_parameter(parameter) for parameter in [*call.get("parameters", ()), *_body(call, document)]]
     table = f"<table><tr><th>parameter</th><th>allowed</th><th></th></tr>{''.join(rows)}</table>" if rows else ""
     answers = "".join(
         f"<tr><td><code>{escape(status)}</code></td><td>{escape(', '.join(answer.get('content', {})))}</td>"
@@ -89,6 +89,18 @@ def _call(method: str, path: str, call: Mapping[str, Any]) -> str:
     )
     title = f"<h2><code>{escape(method)} {escape(path)}</code></h2><p>{escape(call.get('summary', ''))}.</p>"
     return f"{title}{table}<table><tr><th>status</th><th>type</th><th></th></tr>{answers}</table>"
+
+
+def _body(call: Mapping[str, Any], document: Mapping[str, Any]) -> list[dict[str, Any]]:
+    """The keys of a JSON body, in the form of parameters."""
+    schema = call.get("requestBody", {}).get("content", {}).get("application/json", {}).get("schema", {})
+    if "$ref" in schema:
+        schema = document["components"]["schemas"][schema["$ref"].rpartition("/")[2]]
+    needed = schema.get("required", ())
+    return [
+        {"name": f"body: {name}", "schema": part, "required": name in needed}
+        for name, part in schema.get("properties", {}).items()
+    ]
 
 
 def _parameter(parameter: Mapping[str, Any]) -> str:

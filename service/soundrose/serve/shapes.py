@@ -11,7 +11,7 @@ from soundrose.serve.problems import MEDIA_TYPE, problem_body
 __all__ = [
     "ARRAY_EXAMPLE", "HEALTH_EXAMPLE", "LEVELS_EXAMPLE", "MAP_EXAMPLE", "MAP_HEADER_EXAMPLE", "SPECTRUM_EXAMPLE",
     "STATUS_EXAMPLE", "ArrayAnswer", "HealthAnswer", "LevelsAnswer", "LiveAnswer", "MapAnswer", "MapHeader",
-    "ProblemAnswer", "SpectrumAnswer", "StatusAnswer", "problems", "with_example",
+    "ProblemAnswer", "SpectrumAnswer", "StatusAnswer", "any_problem", "problems", "with_example",
 ]  # fmt: skip
 
 Nanoseconds = Annotated[int, Field(description="ns since 1970-01-01T00:00:00 UTC")]
@@ -189,24 +189,31 @@ class ArrayAnswer(_Open):
 _TEXTS = {
     403: "Host is not a name of this service, Origin is another, or a POST is not JSON.",
     404: "There is no such band.",
+    408: "The body did not come in time.",
     413: "The body is too large.",
     422: "A parameter cannot be read, is out of range, or leaves nothing.",
     429: "Too many requests from one address; Retry-After says when to ask again.",
+    431: "Request line and headers are too long.",
     503: "Not there yet, or too much in work; Retry-After says when to ask again.",
 }
 
 
 def problems(*statuses: int, **texts: str) -> dict[int | str, dict[str, Any]]:
-    """`responses` of a call: these errors, and those that any call may answer. texts : s503="..." in place of ours."""
+    """`responses` of a call: errors of these statuses. texts : s503="..." in place of the usual words."""
+    words = {**{status: _TEXTS[status] for status in statuses}, **{int(k[1:]): text for k, text in texts.items()}}
     return {
         status: {
-            "description": texts.get(f"s{status}", _TEXTS[status]),
-            "model": ProblemAnswer,
-            "content": {MEDIA_TYPE: {"example": problem_body(status, texts.get(f"s{status}", _TEXTS[status]))}},
+            "description": text,
+            "content": {MEDIA_TYPE: {"example": problem_body(status, text)}},
             **({"headers": _RETRY} if status in (429, 503) else {}),
         }
-        for status in sorted({*statuses, 403, 413, 429, 503})
+        for status, text in words.items()
     }
+
+
+def any_problem() -> dict[int | str, dict[str, Any]]:
+    """`responses` that every call may have."""
+    return problems(403, 408, 413, 429, 431, 503)
 
 
 _RETRY = {"Retry-After": {"description": "seconds", "schema": {"type": "integer", "minimum": 1}}}
