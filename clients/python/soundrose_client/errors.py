@@ -1,6 +1,11 @@
 """core: what the client raises on purpose."""
 
-__all__ = ["ClientError", "MessageError", "ReceiveTimeout", "SendTimeout", "UsageError"]
+from collections.abc import Mapping
+from typing import Any
+
+__all__ = [
+    "ClientError", "MessageError", "ReceiveTimeout", "SendTimeout", "ServiceError", "Unreachable", "UsageError",
+]  # fmt: skip
 
 
 class ClientError(Exception):
@@ -41,3 +46,26 @@ class SendTimeout(ClientError, TimeoutError):
     """Nobody took what was to be sent in the time allowed."""
 
     code = "send-timeout"
+
+
+class Unreachable(ClientError, ConnectionError):
+    """Nothing answers at the address, or what answered broke off."""
+
+    code = "unreachable"
+
+
+class ServiceError(ClientError):
+    """The service answered with an error.
+
+    status : of HTTP, or of an error frame of the live socket.  detail : what was got and what is allowed.
+    problem : the whole error object.
+    """
+
+    code = "service"
+
+    def __init__(self, status: int, detail: str, problem: Mapping[str, Any] | None = None) -> None:
+        self.status, self.detail, self.problem = status, detail, dict(problem or {})
+        super().__init__(f"{status}: {detail}")
+
+    def __reduce__(self) -> tuple[type["ServiceError"], tuple[int, str, dict[str, Any]]]:
+        return type(self), (self.status, self.detail, self.problem)
