@@ -62,7 +62,8 @@ class EnvelopeBank:
     -----
     With n bins the envelope has M >= n points per frame, M the next fast length divisible by 4, at M / N of the rate.
     Wrap of the steering filters stays out of the middle half. The band edges are sharp in frequency, so a tone between
-    bins rings in time; at a distance of N/4 from the frame's ends that is about 2 / (pi n) of it.
+    bins rings in time from the frame's ends: in the middle half at most 0.92 / n of it, rms 0.75 / n (measured, n from
+    8 to 128, half a bin off).
     """
 
     def __init__(
