@@ -144,7 +144,6 @@ async def _answer(request: Request, workshop: Workshop, tag: str, key: str, work
     """304 where the client has it, else the answer from the workshop."""
     headers = {"ETag": tag, **_TAGGED}
     if is_known(tag, request.headers.getlist("if-none-match")):
-        # a range without bins has no tag that a client could have been given
         return Response(status_code=304, headers=headers)
     try:
         answer = await workshop.make(key, work)
@@ -191,7 +190,7 @@ def _notes(settings: Settings, message: Message) -> list[str]:
     """What must be known to read the picture right, the gravest first."""
     limits, notes = message.header["limits"], []
     if limits["gap"]:
-        notes.append("gap: the average holds little")
+        notes.append("gap: the average is not full yet")
     if not settings.calibration.given:
         notes.append("uncalibrated: levels are relative")
     if limits["clipped"] > 0:

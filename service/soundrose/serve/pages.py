@@ -8,6 +8,7 @@ from fastapi import FastAPI
 from fastapi.responses import HTMLResponse, Response
 
 from soundrose._version import __version__
+from soundrose.serve.shapes import any_problem
 from soundrose.settings_types import Settings
 
 __all__ = ["CAUTIONS", "add_pages", "calls_page", "start_page"]
@@ -73,6 +74,7 @@ def calls_page(document: Mapping[str, Any]) -> str:
     """Every call with its parameters and answers, from an OpenAPI document."""
     parts = [f"<h1>Every call</h1><p>{escape(document['info'].get('description', ''))}</p>"]
     parts.append('<p>The same for programs: <a href="/openapi.json">openapi.json</a>. <a href="/">Start page</a></p>')
+    parts.append(f"<p>Any call may also answer:</p><table>{_answers(any_problem())}</table>")
     for path, item in sorted(document["paths"].items()):
         for method, call in item.items():
             parts.append(_call(method.upper(), path, call, document))
@@ -82,13 +84,18 @@ def calls_page(document: Mapping[str, Any]) -> str:
 def _call(method: str, path: str, call: Mapping[str, Any], document: Mapping[str, Any]) -> str:
     rows = [_parameter(parameter) for parameter in [*call.get("parameters", ()), *_body(call, document)]]
     table = f"<table><tr><th>parameter</th><th>allowed</th><th></th></tr>{''.join(rows)}</table>" if rows else ""
-    answers = "".join(
-        f"<tr><td><code>{escape(status)}</code></td><td>{escape(', '.join(answer.get('content', {})))}</td>"
-        f"<td>{escape(answer.get('description', ''))}</td></tr>"
-        for status, answer in sorted(call["responses"].items())
-    )
+    usual = {str(status) for status in any_problem()} - {"503"}
+    answers = _answers({status: answer for status, answer in call["responses"].items() if status not in usual})
     title = f"<h2><code>{escape(method)} {escape(path)}</code></h2><p>{escape(call.get('summary', ''))}.</p>"
     return f"{title}{table}<table><tr><th>status</th><th>type</th><th></th></tr>{answers}</table>"
+
+
+def _answers(responses: Mapping[Any, Mapping[str, Any]]) -> str:
+    return "".join(
+        f"<tr><td><code>{status}</code></td><td>{escape(', '.join(answer.get('content', {})))}</td>"
+        f"<td>{escape(answer.get('description', ''))}</td></tr>"
+        for status, answer in sorted(responses.items())
+    )
 
 
 def _body(call: Mapping[str, Any], document: Mapping[str, Any]) -> list[dict[str, Any]]:

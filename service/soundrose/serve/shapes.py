@@ -187,6 +187,7 @@ class ArrayAnswer(_Open):
 
 
 _TEXTS = {
+    400: "Not HTTP/1.1, or a body that is not text in UTF-8.",
     403: "Host is not a name of this service, Origin is another, or a POST is not JSON.",
     404: "There is no such band.",
     408: "The body did not come in time.",
@@ -213,7 +214,7 @@ def problems(*statuses: int, **texts: str) -> dict[int | str, dict[str, Any]]:
 
 def any_problem() -> dict[int | str, dict[str, Any]]:
     """`responses` that every call may have."""
-    return problems(403, 408, 413, 429, 431, 503)
+    return problems(400, 403, 408, 413, 429, 431, 503)
 
 
 _RETRY = {"Retry-After": {"description": "seconds", "schema": {"type": "integer", "minimum": 1}}}
