@@ -116,7 +116,7 @@ class MemoryLog:
 class Rig:
     """The server, its newest messages, its log and its hub."""
 
-    def __init__(self, log: MemoryLog | None) -> None:
+    def __init__(self, log: MemoryLog | None, port: int = 0) -> None:
         self.settings = parse_settings(SETTINGS)
         self.latest, self.log = Latest(), log
         app = make_app(Source(self.settings, self.latest, time.monotonic))
@@ -124,7 +124,7 @@ class Rig:
         self.server = uvicorn.Server(
             uvicorn.Config(app, log_config=None, lifespan="off", timeout_graceful_shutdown=1, **WEBSOCKET_OPTIONS)
         )
-        self.listener = socket.create_server(("127.0.0.1", 0))
+        self.listener = socket.create_server(("127.0.0.1", port))
         self.port = self.listener.getsockname()[1]
         self.address = f"ws://127.0.0.1:{self.port}/api/v1/live"
 
@@ -190,8 +190,8 @@ def parse_map(frame: bytes) -> tuple[dict[str, Any], np.ndarray]:
 
 
 @contextlib.asynccontextmanager
-async def running(log: MemoryLog | None = None) -> AsyncIterator[Rig]:
-    rig = Rig(log)
+async def running(log: MemoryLog | None = None, port: int = 0) -> AsyncIterator[Rig]:
+    rig = Rig(log, port)
     serving = asyncio.create_task(rig.server.serve(sockets=[rig.listener]))
     try:
         while not rig.server.started:

@@ -63,6 +63,7 @@ class _Live:
         self._timeout_s = timeout_s
         self._session = LiveSession(request, since, on_hole)
         self._failures = 0
+        self._stack = contextlib.ExitStack()  # closes the connection there is
 
     @property
     def cursor(self) -> str | None:
@@ -144,22 +145,20 @@ class Live(_Live):
 
     def _open(self, deadline: float | None) -> "ClientConnection":
         left = self._left(deadline)
-        connection: ClientConnection = _websockets().sync.client.connect(
+        opening = _websockets().sync.client.connect(
             self._address, subprotocols=[PROTOCOL], max_size=FRAME_MOST, compression=None,
             open_timeout=OPEN_S if left is None else min(left, OPEN_S), close_timeout=1,
         )  # fmt: skip
-        try:
+        with contextlib.ExitStack() as stack:
+            connection: ClientConnection = stack.enter_context(opening)
             connection.send(self._session.first(connection.recv(OPEN_S)))
-        except BaseException:
-            connection.close()
-            raise
-        self._connection = connection
+            self._connection, self._stack = connection, stack.pop_all()
         return connection
 
     def close(self) -> None:
-        connection, self._connection = self._connection, None
-        if connection is not None:
-            connection.close()
+        self._connection = None
+        with contextlib.suppress(OSError):
+            self._stack.close()
 
 
 class AsyncLive(_Live):
