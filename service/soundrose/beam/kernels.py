@@ -10,6 +10,7 @@ go one at a time, so that the same samples give the same bits whatever the backl
 """
 
 from abc import ABC, abstractmethod
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
@@ -161,7 +162,7 @@ class PairKernel(Kernel):
     name = "pairs"
     sides = 2
 
-    def __init__(self, steering: Steering) -> None:
+    def __init__(self, steering: Steering, progress: Callable[[], object] = int) -> None:
         if not steering.paired or steering.mirror is None:
             raise UsageError(
                 "kernel 'pairs' needs a line, shading and sampling skew symmetric about the middle; this band's are"
@@ -172,12 +173,14 @@ class PairKernel(Kernel):
         forward = order[: (len(order) + 1) // 2]
         aft = steering.mirror[forward]
         self._forward, self._aft = rows(forward), rows(aft)
-        self._cosine, self._sine = self._weights(forward, np.where(aft == forward, 0.5, 1.0))
+        self._cosine, self._sine = self._weights(forward, np.where(aft == forward, 0.5, 1.0), progress)
         self._sum = np.empty((len(forward), CHUNK + 2), dtype=np.complex64)
         self._difference = np.empty((len(forward), CHUNK + 2), dtype=np.complex64)
         self._operands = np.zeros((2, CHUNK + 2, 2, self._cosine.shape[2]), dtype=np.float32)
 
-    def _weights(self, forward: NDArray[np.intp], share: NDArray[np.float64]) -> tuple[Floats, Floats]:
+    def _weights(
+        self, forward: NDArray[np.intp], share: NDArray[np.float64], progress: Callable[[], object]
+    ) -> tuple[Floats, Floats]:
         """C and S, each (kept bins, half the beams, terms), real and imaginary part of the forward weights."""
         steering, pairs = self.steering, len(forward)
         shape = (self._kept[1] - self._kept[0], self.columns, max(pairs, FEWEST_TERMS))
@@ -191,6 +194,7 @@ class PairKernel(Kernel):
             weighted = delay_transforms(delays.ravel(), steering.frame_length, self._kept, gain)
             turned = weighted.T.reshape(-1, *delays.shape)
             cosine[:, beams, :pairs], sine[:, beams, :pairs] = turned.real, turned.imag
+            progress()
         return cosine, sine
 
     def _multiply(self, part: NDArray[np.complex64], kept: slice, amplitude: np.float32, out: Floats) -> None:
@@ -223,12 +227,12 @@ class GeneralKernel(Kernel):
     name = "general"
     sides = 1
 
-    def __init__(self, steering: Steering) -> None:
+    def __init__(self, steering: Steering, progress: Callable[[], object] = int) -> None:
         super().__init__(steering, len(steering.cos))
-        self._weights = self._make_weights()
+        self._weights = self._make_weights(progress)
         self._operand = np.zeros((CHUNK + 2, 2, self._weights.shape[2]), dtype=np.float32)
 
-    def _make_weights(self) -> Floats:
+    def _make_weights(self, progress: Callable[[], object]) -> Floats:
         """(kept bins, beams, terms): real parts of all channels, then imaginary parts."""
         steering, channels = self.steering, len(self.steering.x_m)
         terms = max(2 * channels, FEWEST_TERMS)
@@ -238,6 +242,7 @@ class GeneralKernel(Kernel):
             weighted = delay_transforms(delays, steering.frame_length, self._kept, steering.weights).T
             weights[:, beam_i, :channels] = weighted.real
             weights[:, beam_i, channels : 2 * channels] = weighted.imag
+            progress()
         return weights
 
     def _multiply(self, part: NDArray[np.complex64], kept: slice, amplitude: np.float32, out: Floats) -> None:
@@ -253,11 +258,12 @@ class GeneralKernel(Kernel):
         return products
 
 
-def make_kernel(steering: Steering, choice: KernelChoice = "auto") -> Kernel:
+def make_kernel(steering: Steering, choice: KernelChoice = "auto", progress: Callable[[], object] = int) -> Kernel:
     """The kernel for this steering, by geometry and settings, never by timing.
 
+    progress : called again and again while weights are made, which takes a second for the largest arrays.
     UsageError for "pairs" on a line that is not symmetric, and for filters too long for the frame.
     """
     if choice == "general" or (choice == "auto" and not steering.paired):
-        return GeneralKernel(steering)
-    return PairKernel(steering)
+        return GeneralKernel(steering, progress)
+    return PairKernel(steering, progress)

@@ -60,15 +60,18 @@ class BandTimes:
 class BandProcess:
     """The sockets around a `BandStage`."""
 
-    def __init__(self, orders: Orders, band: BandSettings, context: "zmq.Context[zmq.Socket[bytes]]") -> None:
+    def __init__(
+        self, orders: Orders, band: BandSettings, context: "zmq.Context[zmq.Socket[bytes]]", heart: Heartbeat
+    ) -> None:
         self._settings: Settings = orders.settings
         self._band = band
         self._start = new_start()
         self._log = SlowLog()
-        self._stage = BandStage(orders.settings, band)
+        self._heart = heart
+        self._ingest = ""
+        self._stage = BandStage(orders.settings, band, progress=self.beat)
         self._times = BandTimes(orders.settings.feed.rate_hz)
         self._maps = self._dropped_hops = self._taken = 0
-        self._ingest = ""
         self._same_clock = True
         self._report_due = 0.0
         self._hops = context.socket(zmq.DEALER)
@@ -122,6 +125,11 @@ class BandProcess:
             "kernel": self._stage.kernel,
         }
 
+    def beat(self) -> None:
+        """Send a beat if one is due; called from the loop, and while new weights are made."""
+        if self._heart.due:
+            self._heart.beat(ready=self.joined, facts=self.facts() if self.joined else None)
+
     def close(self) -> None:
         self._hops.close()
         self._publisher.close()
@@ -163,12 +171,11 @@ def main(orders: Orders) -> int:
     context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
     heart = Heartbeat(context, orders.endpoints["control"], orders.name)
     heart.beat(ready=False)
-    process = BandProcess(orders, orders.settings.band(orders.name.removeprefix("band:")), context)
+    process = BandProcess(orders, orders.settings.band(orders.name.removeprefix("band:")), context, heart)
     try:
         while not lifeline.ending.is_set():
             process.turn()
-            if heart.due:
-                heart.beat(ready=process.joined, facts=process.facts())
+            process.beat()
     finally:
         process.close()
         heart.close()

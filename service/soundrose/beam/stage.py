@@ -59,6 +59,7 @@ class BandStage:
     settings, band : as read; the band is one of the settings'.
     sink : for what goes to contacts; off by default.
     clock : nanoseconds, for `timings` alone; None (the default) leaves them empty.
+    progress : called now and then while new weights are made, so that a watcher sees that work goes on.
 
     Attributes
     ----------
@@ -73,9 +74,10 @@ class BandStage:
 
     def __init__(
         self, settings: Settings, band: BandSettings, *, sink: Sink | None = None,
-        clock: Callable[[], int] | None = None,
+        clock: Callable[[], int] | None = None, progress: Callable[[], object] = int,
     ) -> None:  # fmt: skip
         self._settings, self._band, self._sink, self._clock = settings, band, sink, clock
+        self._progress = progress
         self._rate_hz = settings.feed.rate_hz
         self._framer = Framer(band.channels, band.frame, self._rate_hz)
         self._weights = RollingWeights(band.average_s, band.frame // 2, self._rate_hz)
@@ -97,7 +99,7 @@ class BandStage:
         self._faded = 1.0
         geometry, steering = self._steering()
         self._geometry = geometry
-        self._kernel = make_kernel(steering, band.kernel)
+        self._kernel = make_kernel(steering, band.kernel, progress)
         self._content = self._kernel.start()
 
     @property
@@ -278,7 +280,7 @@ class BandStage:
     def _make(self, steering: Steering) -> Kernel:
         """A line that is no longer symmetric takes the general kernel, whatever the settings ask for."""
         choice: KernelChoice = "general" if self._band.kernel == "general" else "auto"
-        return make_kernel(steering, choice)
+        return make_kernel(steering, choice, self._progress)
 
     def _exchange(self, geometry: Geometry, kernel: Kernel) -> None:
         """New weights from here on; the average goes on."""
