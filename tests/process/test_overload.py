@@ -77,29 +77,49 @@ def speed_that_fits(folder: Path) -> float:
 
 @dataclass
 class Outcome:
-    fits: float
+    pace: float  # times real time that the feed came at
     sent: Sent
     maps: list[Message]
     band: dict
     expected: int  # maps of an unhurried feed
 
+    @property
+    def taken(self) -> int:
+        """Hops that the band took."""
+        return self.expected + 1 - self.band["dropped_hops"]
 
-@pytest.fixture(scope="module")
-def outcome(tmp_path_factory: pytest.TempPathFactory) -> Outcome:
-    """About eight seconds of host time at three times what fits."""
-    fits = speed_that_fits(tmp_path_factory.mktemp("fits"))
-    blocks = round(8 * 3 * fits * ARRAY.rate_hz / BLOCK)
+    @property
+    def overload(self) -> float:
+        """Hops sent for each that was taken: how many times too much it was in the end."""
+        return (self.expected + 1) / self.taken
+
+
+def overload_run(folder: Path, pace: float) -> Outcome:
+    """About eight seconds of host time at that pace."""
+    blocks = max(60, round(8 * pace * ARRAY.rate_hz / BLOCK))
     settings, sent = ARRAY.settings(HEAVY, overload="drop"), Sent()
-    folder = tmp_path_factory.mktemp("drop")
     with Service(settings, folder) as service, service.listener() as listener, service.feeder() as feeder:
-        feed(feeder, blocks, 3 * fits, sent)
+        feed(feeder, blocks, pace, sent)
         status = listener.wait_status(
             "waiting, all samples, and the band at rest",
             lambda s: s["samples"] == blocks * BLOCK and s["state"] == "waiting" and accounted(s, blocks),
             20,
         )
         maps = listener.wait_count("map/main", status["bands"]["main"]["maps"])
-        return Outcome(fits, sent, maps, status["bands"]["main"], blocks - 1)
+        return Outcome(pace, sent, maps, status["bands"]["main"], blocks - 1)
+
+
+@pytest.fixture(scope="module")
+def outcome(tmp_path_factory: pytest.TempPathFactory) -> Outcome:
+    """At three times what fits. Where the machine was busy with other things while one of the two was measured, the
+    run shows it by what was taken, and is done again at a pace corrected by that."""
+    pace = 3 * speed_that_fits(tmp_path_factory.mktemp("fits"))
+    for _ in range(4):
+        outcome = overload_run(tmp_path_factory.mktemp("drop"), pace)
+        if 2.6 <= outcome.overload <= 3.4:
+            break
+        pace *= 3 / outcome.overload
+    return outcome
 
 
 def accounted(status: dict, blocks: int) -> bool:
@@ -109,9 +129,8 @@ def accounted(status: dict, blocks: int) -> bool:
 
 def test_feed_was_truly_too_much(outcome: Outcome) -> None:
     took = outcome.sent.when[-1] - outcome.sent.when[0]
-    pace = outcome.sent.end[-1] / ARRAY.rate_hz / took
-    assert pace > 2 * outcome.fits, f"sent at {pace:.1f} times real time, {outcome.fits:.1f} fit"
-    assert outcome.band["dropped_hops"] > 0.3 * outcome.expected
+    assert outcome.sent.end[-1] / ARRAY.rate_hz / took > 0.8 * outcome.pace, "the source was held back"
+    assert outcome.overload > 2.5, f"{outcome.overload:.2f} times what fits, at {outcome.pace:.2f} times real time"
 
 
 def test_maps_missing_are_dropped_hops_and_gaps(outcome: Outcome) -> None:
@@ -125,8 +144,8 @@ def test_at_least_a_quarter_of_the_maps_come(outcome: Outcome) -> None:
 
     Judged by the hops that were taken, so that a machine busy with other things during this test does not decide.
     """
-    taken = outcome.expected + 1 - outcome.band["dropped_hops"]
-    assert len(outcome.maps) >= 0.75 * taken, f"{len(outcome.maps)} maps of {taken} hops, {outcome.expected} sent"
+    told = f"{len(outcome.maps)} maps of {outcome.taken} hops taken, {outcome.expected} sent"
+    assert len(outcome.maps) >= 0.75 * outcome.taken, told
 
 
 def test_maps_are_of_whole_frames_in_the_hops_that_came(outcome: Outcome) -> None:
@@ -149,7 +168,7 @@ def test_each_map_is_near_the_newest_sample(outcome: Outcome) -> None:
             for m, first in zip(outcome.maps, first_samples(outcome), strict=True)]  # fmt: skip
     told = f"oldest {max(ages):.2f} s, median {np.median(ages):.2f} s"
     assert np.quantile(ages, 0.95) <= 1.0 + FRAME / ARRAY.rate_hz, told
-    assert max(ages) <= max(1.0, 3 * outcome.fits) + FRAME / ARRAY.rate_hz, told
+    assert max(ages) <= max(1.0, outcome.pace) + FRAME / ARRAY.rate_hz, told
 
 
 def test_maps_that_come_hold_what_their_hops_hold(outcome: Outcome) -> None:
