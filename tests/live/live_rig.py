@@ -12,10 +12,11 @@ from typing import Any
 import msgpack
 import numpy as np
 import uvicorn
+from fastapi import FastAPI
 from websockets.asyncio.client import ClientConnection, connect
 from websockets.exceptions import ConnectionClosedError
 
-from soundrose.serve.app import Source, make_app
+from soundrose.serve.app import Source
 from soundrose.serve.latest import Latest, Message
 from soundrose.serve.live import add_live
 from soundrose.serve.problems import Problem
@@ -119,7 +120,7 @@ class Rig:
     def __init__(self, log: MemoryLog | None, port: int = 0) -> None:
         self.settings = parse_settings(SETTINGS)
         self.latest, self.log = Latest(), log
-        app = make_app(Source(self.settings, self.latest, time.monotonic))
+        app = FastAPI()
         self.hub = add_live(app, Source(self.settings, self.latest, time.monotonic), log)
         self.server = uvicorn.Server(
             uvicorn.Config(app, log_config=None, lifespan="off", timeout_graceful_shutdown=1, **WEBSOCKET_OPTIONS)
