@@ -4,6 +4,7 @@
     python tests/process/mutants.py cone gap   those whose name holds one of the words
     python tests/process/mutants.py --list
 
+First an unchanged copy goes through the same tests: it must be green, or red would mean nothing.
 A mutant is a place in the text and what to write there instead. A place that is not there exactly once is an error:
 the code has moved on, and the mutant must follow. Exit status 0: every mutant was red. Not a test itself: pytest does
 not collect it.
@@ -103,7 +104,7 @@ MUTANTS = (
 
 def copied(mutant: Mutant, folder: Path) -> str:
     """PYTHONPATH of a copy of the service with the mutant in it. ValueError where its place is not found once."""
-    for part in ("service", "clients/python"):
+    for part in ("service", "clients"):
         shutil.copytree(ROOT / part, folder / part, ignore=shutil.ignore_patterns("__pycache__"))
     for file, old, new in mutant.edits:
         path = folder / "service" / "soundrose" / file
@@ -121,14 +122,21 @@ def judged(mutant: Mutant) -> tuple[str, str]:
             path = copied(mutant, Path(folder))
         except (OSError, ValueError) as error:
             return "ERROR", str(error)
-        command = [sys.executable, "-m", "pytest", "-q", "-x", "--tb=line", "-p", "no:cacheprovider",
-                   str(HERE / mutant.tests[0]), *mutant.tests[1:]]  # fmt: skip
+        command = [sys.executable, "-m", "pytest", "-q", "-x", "--tb=line", "-p", "no:cacheprovider", *mutant.tests]
         environment = {**os.environ, "SERVICE_PYTHONPATH": path}
-        ended = subprocess.run(command, env=environment, cwd=ROOT, capture_output=True, text=True, check=False)
+        ended = subprocess.run(command, env=environment, cwd=HERE, capture_output=True, text=True, check=False)
     lines = [line for line in ended.stdout.splitlines() if line.startswith(("FAILED", "ERROR"))]
     if ended.returncode == 1 and lines:
         return "red", lines[0].split("::", 1)[-1]
     return ("GREEN(!)", "no test noticed") if ended.returncode == 0 else ("ERROR", ended.stdout[-300:])
+
+
+def unchanged_is_green(chosen: list[Mutant]) -> bool:
+    """Whether the copy without a mutant passes all the files of tests that the chosen ones are judged by."""
+    files = sorted({mutant.tests[0] for mutant in chosen})
+    outcome, why = judged(Mutant("unchanged", (), tuple(files)))
+    print(f"{'(unchanged)':42} {len(files)} files {outcome if outcome != 'GREEN(!)' else 'green'}  {why}", flush=True)
+    return outcome == "GREEN(!)"
 
 
 def main(words: list[str]) -> int:
@@ -137,6 +145,8 @@ def main(words: list[str]) -> int:
         print("\n".join(mutant.name for mutant in MUTANTS))
         return 0
     chosen = [mutant for mutant in MUTANTS if not words or any(word in mutant.name for word in words)]
+    if not chosen or not unchanged_is_green(chosen):
+        return 1
     outcomes = []
     for mutant in chosen:
         begin = time.monotonic()
@@ -145,7 +155,7 @@ def main(words: list[str]) -> int:
         took = time.monotonic() - begin
         print(f"{mutant.name:42} {mutant.tests[0]:24} {outcome:9} {took:5.1f} s  {why}", flush=True)
     print(f"{outcomes.count('red')} of {len(outcomes)} red")
-    return 0 if outcomes and set(outcomes) == {"red"} else 1
+    return 0 if set(outcomes) == {"red"} else 1
 
 
 if __name__ == "__main__":
