@@ -12,14 +12,15 @@ import threading
 import time
 from collections.abc import Mapping
 from dataclasses import dataclass, field
-from pathlib import Path
 from datetime import UTC, datetime
+from pathlib import Path
 from typing import Any
 
 import msgpack
 import zmq
 from threadpoolctl import threadpool_limits
 
+from soundrose.garbage import GarbageWatch
 from soundrose.settings_types import LogFormat, Settings
 
 __all__ = [
@@ -114,19 +115,32 @@ class Heartbeat:
         self._socket.setsockopt(zmq.SNDHWM, 64)
         self._socket.connect(endpoint)
         self._name, self._next = name, 0.0
+        self._garbage = GarbageWatch()
 
     @property
     def due(self) -> bool:
         return time.monotonic() >= self._next
 
     def beat(self, *, ready: bool, facts: Mapping[str, Any] | None = None) -> None:
-        """Send one beat. facts : small mapping of plain values, merged into what the supervisor knows of the child."""
+        """Send one beat. facts : small mapping of plain values, merged into what the supervisor knows of the child.
+
+        The first ready beat finds the process warm: what it holds by then is taken out of the collector's way.
+        """
+        if ready:
+            self._garbage.settle()
         self._next = time.monotonic() + HEARTBEAT_S
-        message = {"name": self._name, "pid": os.getpid(), "ready": ready, "facts": dict(facts or {})}
+        message = {
+            "name": self._name,
+            "pid": os.getpid(),
+            "ready": ready,
+            "facts": dict(facts or {}),
+            "garbage": self._garbage.facts(),
+        }
         with contextlib.suppress(zmq.Again):
             self._socket.send(msgpack.packb(message), zmq.NOBLOCK)
 
     def close(self) -> None:
+        self._garbage.close()
         self._socket.close()
 
 

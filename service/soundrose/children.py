@@ -36,6 +36,7 @@ class Child:
         self.restarts = -1  # the first start is none
         self.why: str | None = None  # of its last end; None while all is well
         self.facts: dict[str, Any] = {}
+        self.garbage: dict[str, Any] | None = None  # the collector's pauses in the process that runs now
         self._process: subprocess.Popen[bytes] | None = None
         self._failures = 0
         self._start_at = 0.0
@@ -130,8 +131,8 @@ class Child:
         self._process.wait()
 
     def forget(self) -> None:
-        """It has ended in order."""
-        self._process = None
+        """It has ended."""
+        self._process, self.garbage = None, None
         self._set("down")
 
     def _clear(self, now: float) -> None:

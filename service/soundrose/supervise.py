@@ -128,6 +128,7 @@ class Supervisor:
             child = self._children.get(name)
             if child is None or beat["pid"] != child.pid:
                 continue
+            child.garbage = beat["garbage"]
             if child.hear(beat["pid"], beat["ready"], facts):
                 _log.info("%s is up (pid %d)", name, beat["pid"])
                 self._status_due = 0.0
@@ -205,6 +206,7 @@ class Supervisor:
                 "restarts": max(child.restarts, 0),
                 "since": child.since_ns,
                 "why": child.why,
+                "garbage": child.garbage,
             }
             for child in self._children.values()
         ]
@@ -216,6 +218,7 @@ class Supervisor:
                 "restarts": 0,
                 "since": self._service_start,
                 "why": None,
+                "garbage": None,
             }
             for name, heard in self._elsewhere.items()
         ]

@@ -25,7 +25,7 @@ BANNED_IN_CORE = {
 }
 #: a room imports only itself, what stands lower, and what stands under all
 ORDER = ["array", "feed", "beam", "contact", "pipeline", "scene", "serve", "supervise", "cli"]
-UNDER_ALL = {"errors", "_version", "settings_types", "settings", "product", "child", "store"}
+UNDER_ALL = {"errors", "_version", "settings_types", "settings", "product", "child", "garbage", "store"}
 SAME_HEIGHT = {
     "children": "supervise",
     "notify": "supervise",

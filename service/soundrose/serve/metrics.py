@@ -126,6 +126,19 @@ def _processes(processes: Iterable[Mapping[str, Any]], supervisor_pid: int) -> I
         "soundrose_process_restarts_total", "Starts of a process after its first.", ["process"],
         [([item["name"]], item["restarts"]) for item in listed],
     )  # fmt: skip
+    collected = [(item["name"], item["garbage"]) for item in listed if item.get("garbage")]
+    yield _labelled(
+        "soundrose_process_gc_pauses_total", "Pauses of the garbage collector since the process was warm.",
+        ["process"], [([process], found["pauses"]) for process, found in collected],
+    )  # fmt: skip
+    yield _labelled(
+        "soundrose_process_gc_pause_seconds_total", "Time in them.", ["process"],
+        [([process], found["total_s"]) for process, found in collected],
+    )  # fmt: skip
+    yield _labelled(
+        "soundrose_process_gc_longest_pause_seconds", "The longest of them.", ["process"],
+        [([process], found["longest_ms"] / 1000) for process, found in collected],
+    )  # fmt: skip
     pids = [("run", supervisor_pid), *((item["name"], item["pid"]) for item in listed if item["pid"] is not None)]
     figures = [(name, found) for name, pid in pids if (found := process_figures(pid)) is not None]
     for key, name, text in (
