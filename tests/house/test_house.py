@@ -115,3 +115,15 @@ def test_top_level_is_what_it_should_be():
 
 def test_no_owner_less_names():
     assert not {path.stem for path in FILES} & {"utils", "util", "helpers", "common", "misc"}
+
+
+#: the host's clock is read only to stamp what is shown or kept; intervals come from the monotonic clock
+STAMPS = {"supervise.py", "children.py", "command.py", "source.py", "process.py"}
+
+
+@pytest.mark.parametrize("path", FILES, ids=name)
+def test_host_clock_measures_nothing(path):
+    text = path.read_text()
+    assert "time.time()" not in text
+    assert "datetime.now" not in text
+    assert "time_ns()" not in text.replace("monotonic_ns()", "") or path.name in STAMPS
