@@ -31,7 +31,7 @@ def numbers_taken(ring: HopRing, band: str = "a") -> list[tuple[int, int]]:
 
 
 def test_capacity_is_three_quarters_of_a_second_or_two_frames_of_the_slowest_band():
-    assert ring_capacity(2048, 16000.0, [4096]) == 5
+    assert ring_capacity(2048, 16000.0, [4096]) == 6
     assert ring_capacity(4096, 16000.0, [8192]) == 4
     assert ring_capacity(2048, 16000.0, [4096, 32768]) == 32
 

@@ -24,8 +24,9 @@ RING_S = 0.75
 
 
 def ring_capacity(hop: int, rate_hz: float, frames: Sequence[int]) -> int:
-    """Hops that the ring keeps in `drop`: 0.75 s, or two frames of the slowest band where that is more."""
-    return max(int(RING_S * rate_hz / hop), -(-2 * max(frames) // hop))
+    """Hops that the ring keeps in `drop`: the newest and what is at most 0.75 s older, or two frames of the slowest
+    band where that is more."""
+    return max(1 + int(RING_S * rate_hz / hop), -(-2 * max(frames) // hop))
 
 
 @dataclass(frozen=True, slots=True)
