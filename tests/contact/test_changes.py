@@ -137,7 +137,10 @@ def test_a_restart_between_two_messages_is_seen_by_its_count_and_pid():
     assert [event["what"] for event in told(watch, status(process("ingest", pid=11, restarts=1, why="x")))] == [
         "process-down", "process-up",
     ]  # fmt: skip
-    assert [event["what"] for event in told(watch, status(process("ingest", pid=12, restarts=1)))] == [
+    assert [event["what"] for event in told(watch, status(process("ingest", pid=11, restarts=2)))] == [
+        "process-down", "process-up",
+    ]  # fmt: skip
+    assert [event["what"] for event in told(watch, status(process("ingest", pid=12, restarts=2)))] == [
         "process-down", "process-up",
     ]  # fmt: skip
 

@@ -20,10 +20,11 @@ from pathlib import Path
 from store_rig import everything
 
 from soundrose.settings_types import StoreSettings
-from soundrose.store.event_log import COMMIT_S, EventLog
+from soundrose.store.event_log import EventLog
 from soundrose.store.schema import FILE_NAME
 
 TOGETHER = 5  #: logs written at the same time
+DISK_S = 0.2  #: of the second, left for the commit itself
 
 
 def write(folder: str, first: int) -> None:
@@ -69,7 +70,7 @@ class Victim:
             process.send_signal(signal.SIGKILL)
             reader.join()
         said = [line.split() for line in lines if line.endswith("\n")]
-        slow_s = max(0.0, max(float(commit_s) for _, _, commit_s in said) - (1.0 - COMMIT_S))
+        slow_s = max(0.0, max(float(commit_s) for _, _, commit_s in said) - DISK_S)
         due = [int(n) for n, at, _ in said if float(at) < killed_at - 1.0 - slow_s]
         last = self.look()
         self.first = last + 1

@@ -206,6 +206,8 @@ def test_reading_can_end_at_a_cursor(tmp_path, reader):
         assert [item.get("n") for item in items] == [None, 0, 1, 2, 3, 4]
         assert place == end
         assert reader.since(place, None, 100, until=end) == ([], end)
+        behind = Cursor(end.log, 8)
+        assert reader.since(behind, None, 100, until=end) == ([], behind)  # never back
 
 
 @pytest.mark.parametrize("limit", [0, -1, MOST_ITEMS + 1])
