@@ -21,7 +21,15 @@ NAME = re.compile(r"soundrose_[a-z0-9]+(_[a-z0-9]+)*")
 
 def status(**more):
     processes = [
-        {"name": "ingest", "state": "up", "pid": os.getpid(), "restarts": 2, "since": 1, "why": None},
+        {
+            "name": "ingest",
+            "state": "up",
+            "pid": os.getpid(),
+            "restarts": 2,
+            "since": 1,
+            "why": None,
+            "garbage": {"pauses": 3, "total_s": 0.5, "longest_ms": 20.0},
+        },
         {"name": "band:main", "state": "down", "pid": None, "restarts": 0, "since": 1, "why": None},
         {"name": "serve", "state": "up", "pid": 2**22 + 5, "restarts": 0, "since": 1, "why": None},
     ]
@@ -84,6 +92,8 @@ def test_names_units_and_help_are_by_the_rules():
         ("soundrose_service_start_time_seconds", {}, 1.5),
         ("soundrose_process_restarts_total", {"process": "ingest"}, 2),
         ("soundrose_process_state", {"process": "band:main", "state": "down"}, 1),
+        ("soundrose_process_gc_pauses_total", {"process": "ingest"}, 3),
+        ("soundrose_process_gc_longest_pause_seconds", {"process": "ingest"}, 0.02),
         ("soundrose_band_load_ratio", {"band": "main"}, 0.25), ("soundrose_band_stale", {"band": "main"}, 1),
         ("soundrose_band_latency_seconds", {"band": "main", "quantile": "0.5"}, 0.005),
         ("soundrose_log_events_written_total", {}, 5), ("soundrose_log_failing", {}, 0),
