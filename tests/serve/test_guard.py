@@ -190,13 +190,18 @@ def test_port_scan_leaves_nothing_behind(served: Served) -> None:
 
 def test_half_a_request_ends_in_bounded_time(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(http11, "HEAD_S", 0.2)
-    monkeypatch.setattr(http11, "IDLE_S", 1)
+    monkeypatch.setattr(http11, "IDLE_S", 1)  # an idle connection is no half request
     with serving() as served:
         assert served.raw() == b""
         assert served.raw(b"GET /livez HTTP/1.1\r\nHost: ") == b""
         ours = b"Host: 127.0.0.1:%d\r\n" % served.port
         got = served.raw(b"GET /livez HTTP/1.1\r\n" + ours + b"\r\n", b"GET /livez HTTP/1.1\r\n")
         assert got.count(b"HTTP/1.1 200") == 1  # the second never came whole
+        with socket.create_connection(("127.0.0.1", served.port), timeout=20) as link:
+            link.sendall(b"GET /livez HTTP/1.1\r\n" + ours + b"\r\n")
+            assert link.recv(4096).startswith(b"HTTP/1.1 200")
+            link.sendall(b"GET /livez HT")  # half a request long after a whole one
+            assert link.recv(4096) == b""
         assert served.get("/livez").status == 200
 
 

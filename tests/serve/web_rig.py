@@ -6,7 +6,7 @@ import socket
 import threading
 import time
 from collections.abc import Callable, Iterator, Mapping
-from contextlib import contextmanager
+from contextlib import closing, contextmanager
 from dataclasses import dataclass, field
 from http import HTTPStatus
 from typing import Any
@@ -164,7 +164,7 @@ class Served:
             connection.close()
 
     def raw(self, *pieces: bytes, wait_s: float = 20.0) -> bytes:
-        """Send bytes as they are on one connection, and read until the server ends it or `wait_s` is over."""
+        """Send bytes as they are on one connection, and read until the server ends it; it must within `wait_s`."""
         with socket.create_connection(("127.0.0.1", self.port), timeout=wait_s) as link:
             for piece in pieces:
                 link.sendall(piece)
@@ -172,7 +172,7 @@ class Served:
             try:
                 while part := link.recv(65536):
                     got += part
-            except (ConnectionResetError, TimeoutError):
+            except ConnectionResetError:
                 pass
             return got
 
@@ -180,22 +180,21 @@ class Served:
 @contextmanager
 def serving(settings: Settings | None = None, allowance: Allowance = WIDE_OPEN) -> Iterator[Served]:
     """Serve on a port of the system's choice until the block ends."""
-    listener = listen("127.0.0.1", 0)
-    served = Served(listener.getsockname()[1])
-    source = Source(settings or small_settings(), served.latest, time.monotonic)
-    hosts = host_names("127.0.0.1", served.port)
-    config = uvicorn.Config(dress(make_app(source), hosts, time.monotonic, allowance), **server_options())
-    server = uvicorn.Server(config)
-    thread = threading.Thread(target=server.run, kwargs={"sockets": [listener]})
-    thread.start()
-    try:
-        until(lambda: server.started, "the server is up")
-        yield served
-    finally:
-        server.should_exit = True
-        thread.join(20)
-        listener.close()
-        assert not thread.is_alive()
+    with closing(listen("127.0.0.1", 0)) as listener:
+        served = Served(listener.getsockname()[1])
+        source = Source(settings or small_settings(), served.latest, time.monotonic)
+        hosts = host_names("127.0.0.1", served.port)
+        config = uvicorn.Config(dress(make_app(source), hosts, time.monotonic, allowance), **server_options())
+        server = uvicorn.Server(config)
+        thread = threading.Thread(target=server.run, kwargs={"sockets": [listener]})
+        thread.start()
+        try:
+            until(lambda: server.started, "the server is up")
+            yield served
+        finally:
+            server.should_exit = True
+            thread.join(20)
+            assert not thread.is_alive()
 
 
 def until(true: Callable[[], bool], what: str, seconds: float = 20.0) -> None:
