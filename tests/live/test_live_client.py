@@ -55,6 +55,8 @@ def test_synchronous_client_reads_the_same_in_a_thread():
                     seen.append(message)
 
         await asyncio.to_thread(read)
+        while rig.hub.clients:  # it has closed its connection
+            await asyncio.sleep(0.01)
         assert sorted(message.kind for message in seen) == ["map", "status"]
         assert next(m for m in seen if m.kind == "map").level_db.shape == (19, 5)
 

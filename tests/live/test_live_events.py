@@ -86,6 +86,23 @@ def test_events_that_come_while_a_page_is_read_are_neither_lost_nor_doubled(duri
     live(scenario, log)
 
 
+def test_event_that_is_logged_but_not_yet_handed_on_comes_once():
+    log = MemoryLog()
+
+    async def scenario(rig: Rig):
+        log.add("alert", n=1)
+        log.add("alert", n=2, hand_on=False)
+        async with rig.client() as client:
+            await client.ask("alert", since=cursor(0))
+            assert await numbers(client, 1) == [1]
+            while not all(c.follows for c in rig.hub.clients):
+                await asyncio.sleep(0.01)
+            log.add("alert", n=3)
+            assert await numbers(client, 2) == [2, 3]
+
+    live(scenario, log)
+
+
 def test_events_are_exact_over_reconnections_while_they_come_in():
     log, total = MemoryLog(), 300
 

@@ -140,8 +140,8 @@ def test_silent_client_that_never_wakes_is_cut_and_its_place_is_free_again(impat
             await asyncio.sleep(0.01)
         seq = 0
         while rig.hub.clients:
-            rig.put(map_message(seq := seq + 1, level_db=levels(0, 145, 400)))
-            await asyncio.sleep(0.005)
+            rig.put(map_message(seq := seq + 1, level_db=levels(0, 145, 1500)))
+            await asyncio.sleep(0.02)
         while rig.server.server_state.connections:
             await asyncio.sleep(0.01)
         silent._socket.close()
