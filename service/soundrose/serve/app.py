@@ -9,8 +9,10 @@ from starlette.types import ASGIApp
 
 from soundrose._version import __version__
 from soundrose.product.messages import VERSION
+from soundrose.serve.display_files import add_display, find_display
 from soundrose.serve.document import install_document
 from soundrose.serve.guard import Guard
+from soundrose.serve.history import add_history
 from soundrose.serve.latest import not_ready
 from soundrose.serve.limits import Allowance, Headed, Limited
 from soundrose.serve.map_calls import add_array, add_maps
@@ -60,7 +62,9 @@ def make_app(source: Source, workshop: Workshop | None = None) -> FastAPI:
     _add_topic_calls(app, source)
     add_maps(app, source, workshop)
     add_array(app, source, workshop)
+    add_history(app, source, workshop)
     add_pages(app, source.settings)
+    add_display(app, find_display())
     install_document(app)
     return app
 

@@ -56,7 +56,7 @@ reload();
 
 
 def start_page(settings: Settings) -> str:
-    """The page at `/`: the newest map, its links, and the cautions."""
+    """The page at `/plain`: the newest map, its links, and the cautions."""
     ranges = ", ".join(f"{band.band_hz[0]:g} to {band.band_hz[1]:g} Hz" for band in settings.bands)
     options = "".join(f'<option value="{escape(b.name)}">{escape(b.name)}</option>' for b in settings.bands)
     body = f"""<h1>Array {escape(settings.array.id)}</h1>
@@ -73,7 +73,7 @@ def start_page(settings: Settings) -> str:
 def calls_page(document: Mapping[str, Any]) -> str:
     """Every call with its parameters and answers, from an OpenAPI document."""
     parts = [f"<h1>Every call</h1><p>{escape(document['info'].get('description', ''))}</p>"]
-    parts.append('<p>The same for programs: <a href="/openapi.json">openapi.json</a>. <a href="/">Start page</a></p>')
+    parts.append('<p>For programs: <a href="/openapi.json">openapi.json</a>. <a href="/plain">Plain start page</a></p>')
     parts.append(f"<p>Any call may also answer:</p><table>{_answers(any_problem())}</table>")
     for path, item in sorted(document["paths"].items()):
         for method, call in item.items():
@@ -142,11 +142,11 @@ def _page(title: str, body: str) -> str:
 
 
 def add_pages(app: FastAPI, settings: Settings) -> None:
-    """`/`, `/api` and what they load."""
+    """`/plain`, `/api` and what they load."""
     start = start_page(settings)
 
-    @app.get("/", include_in_schema=False)
-    async def root() -> HTMLResponse:
+    @app.get("/plain", include_in_schema=False)
+    async def start_plain() -> HTMLResponse:
         return HTMLResponse(start)
 
     @app.get("/api", include_in_schema=False)

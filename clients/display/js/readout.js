@@ -1,0 +1,72 @@
+// @ts-check
+/** What is under the pointer, in words and numbers. */
+import { angleDeg, widthDeg } from "./beams.js";
+import { averageOverBeams, beamAt, binAt, levelAt } from "./frame.js";
+import { bothSides, bearing, frequency, level } from "./wording.js";
+
+/** @typedef {import("./scene.js").Scene} Scene */
+
+/** @param {Scene} scene @returns {[string, string][]} */
+export function pointerPairs(scene) {
+  const { cursor, map } = scene;
+  if (cursor === null || map === null) return [["Pointer", "move it over a plot, or use the arrow keys"]];
+  const [starboard, port] = bothSides(cursor.cos);
+  const beam = beamAt(map.cos, cursor.cos);
+  const bin = binAt(map, cursor.hz);
+  const mean = new Float32Array(map.bins);
+  averageOverBeams(map, mean);
+  const here = levelAt(map, beam, bin);
+  const valid = scene.freshness === "fresh" || scene.freshness === "stale";
+  const width = scene.line === null ? null : widthDeg(scene.line, cursor.hz, cursor.cos);
+  return [
+    ["Frequency", frequency(cursor.hz)],
+    ["Cone angle", `${bearing(angleDeg(cursor.cos))} from forward`],
+    ["Either", starboard],
+    ["or", port],
+    ["True", "-- no heading"],
+    ["Beamwidth", width === null ? "no bearing here" : `${width.toFixed(1)}° at half power`],
+    ["Level", valid ? `${level(here)} re 1 µPa²/Hz` : "--.- dB (stale)"],
+    ["Over mean", valid ? `${(here - mean[bin]).toFixed(1)} dB` : "--.- dB (stale)"],
+    ["Images", imagesText(scene, cursor.cos)],
+  ];
+}
+
+/** @param {Scene} scene @param {number} cos */
+function imagesText(scene, cos) {
+  const spacing = scene.band?.spacing_m ?? null;
+  if (spacing === null || scene.array === null) return "uneven spacing";
+  return `from ${frequency(scene.array.sound_speed_m_s / (spacing * (1 + Math.abs(cos))))} up`;
+}
+
+/** Loudest cell in view. @param {import("./types.js").LiveMap} map @param {import("./types.js").Range} range */
+export function loudest(map, range) {
+  let best = -1;
+  for (let bin = 0; bin < map.bins; bin++) {
+    const hz = map.f0Hz + bin * map.dfHz;
+    if (hz < range.low || hz > range.high) continue;
+    for (let beam = 0; beam < map.beams; beam++) {
+      const at = beam * map.bins + bin;
+      if (best < 0 || map.level[at] > map.level[best]) best = at;
+    }
+  }
+  if (best < 0) return null;
+  return { cos: map.cos[Math.floor(best / map.bins)], hz: map.f0Hz + (best % map.bins) * map.dfHz };
+}
+
+/**
+ * The next beam that stands out of its neighbours at a frequency, going aft, round and round.
+ * @param {import("./types.js").LiveMap} map @param {number} hz @param {number} cos where to go on from
+ * @returns {number | null} cosine
+ */
+export function nextSummit(map, hz, cos) {
+  const bin = binAt(map, hz);
+  const levels = Float32Array.from({ length: map.beams }, (_, beam) => levelAt(map, beam, bin));
+  const sorted = Float32Array.from(levels).sort();
+  const least = sorted[Math.floor(map.beams / 2)] + 3;
+  const tops = [];
+  for (let beam = 0; beam < map.beams; beam++) {
+    const [before, after] = [levels[beam - 1] ?? -Infinity, levels[beam + 1] ?? -Infinity];
+    if (levels[beam] >= least && levels[beam] > before && levels[beam] >= after) tops.push(map.cos[beam]);
+  }
+  return tops.find((u) => u < cos - 1e-9) ?? tops[0] ?? null;
+}
