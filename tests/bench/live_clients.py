@@ -35,6 +35,7 @@ from soundrose.settings import parse_settings
 
 BEAMS, BINS, MAPS_HZ = 145, 1000, 8
 REQUEST = {"subscribe": ["map"], "map": {"bins": 256, "beams": 145, "rate_hz": 5, "encoding": "u1"}}
+LIMITS = {"channels_used": 48, "channels": 48, "gap": False, "clipped": 0.0, "alias_hz": 2000.0, "masked": 0.0}
 SETTINGS = {
     "array": {"id": "aft", "hydrophones": 48, "spacing_m": 0.375},
     "calibration": {"sensitivity_db": -180.0, "gain_db": 20.0, "full_scale_v": 2.5},
@@ -49,7 +50,7 @@ def publish(socket_: Any, ending: threading.Event) -> None:
     cone = [float(v) for v in np.degrees(np.arccos(np.linspace(1, -1, BEAMS)))]
     head = {"v": 1, "kind": "map", "array": "aft", "start": "00000000000000aa", "band": "main", "run": "bench",
             "shape": [BEAMS, BINS], "cone_deg": cone, "f0_hz": 50.78125, "df_hz": 3.90625,
-            "quantity": "spectral density level", "unit": "dB re 1 \u00b5Pa\u00b2/Hz", "limits": {}}  # fmt: skip
+            "quantity": "spectral density level", "unit": "dB re 1 \u00b5Pa\u00b2/Hz", "limits": LIMITS, "span_s": 2.0, "averages": 9.5}  # fmt: skip
     status = {
         "v": 1,
         "kind": "status",
@@ -192,13 +193,16 @@ def run(arguments: argparse.Namespace) -> dict[str, Any]:
         try:
             beat: dict[str, Any] = {"ready": False}
             while not beat["ready"]:
+                if not control.poll(30_000) or child.exit_code is not None:
+                    raise SystemExit("serve did not come up")
                 beat = msgpack.unpackb(control.recv())
             drain.start()
             return _measure(arguments, beat["facts"]["http"].replace("http", "ws") + "/api/v1/live", child.pid or 0)
         finally:
             ending.set()
             sender.join()
-            drain.join()
+            if drain.is_alive():
+                drain.join()
             child.let_go()
             child.kill()
             publisher.close(0)
