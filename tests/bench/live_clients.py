@@ -50,7 +50,8 @@ def publish(socket_: Any, ending: threading.Event) -> None:
     cone = [float(v) for v in np.degrees(np.arccos(np.linspace(1, -1, BEAMS)))]
     head = {"v": 1, "kind": "map", "array": "aft", "start": "00000000000000aa", "band": "main", "run": "bench",
             "shape": [BEAMS, BINS], "cone_deg": cone, "f0_hz": 50.78125, "df_hz": 3.90625,
-            "quantity": "spectral density level", "unit": "dB re 1 \u00b5Pa\u00b2/Hz", "limits": LIMITS, "span_s": 2.0, "averages": 9.5}  # fmt: skip
+            "quantity": "spectral density level", "unit": "dB re 1 \u00b5Pa\u00b2/Hz", "limits": LIMITS,
+            "span_s": 2.0, "averages": 9.5}  # fmt: skip
     status = {
         "v": 1,
         "kind": "status",
