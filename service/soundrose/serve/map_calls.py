@@ -34,7 +34,7 @@ from soundrose.settings_types import BandSettings, Settings
 __all__ = ["MOST_BEAMS", "MOST_BINS", "add_array", "add_maps"]
 
 MOST_BINS = 1_048_576  #: of the parameters, far above any map
-MOST_BEAMS = 65_536
+MOST_BEAMS = 1_000_000
 MOST_HZ = 1e9
 _TAGGED = {"Cache-Control": "no-cache"}
 _ETAG = {"ETag": {"description": 'names this answer: "start-seq-hash"', "schema": {"type": "string"}}}
