@@ -1,7 +1,8 @@
 """What holds for every test: one BLAS thread, no deadline in property tests, and layers by folder.
 
 Layers run in this order: core (objects and sockets inside the test's own process), reference (published values),
-process (the service or its parts as processes of their own). A test marked `speed` runs only when asked for.
+process (the service or its parts as processes of their own), browser (the display in Chromium). A test marked `speed`
+runs only when asked for.
 A hang is cut by the timeout in pyproject.toml, ten seconds after the stacks of all threads have been written.
 """
 
@@ -18,8 +19,8 @@ assert "numpy" not in sys.modules, "numpy was imported before its threads were s
 import pytest  # noqa: E402
 from hypothesis import settings  # noqa: E402
 
-LAYERS = ("core", "reference", "process")
-PROCESS_FOLDERS = frozenset({"process", "supervise", "pipeline", "browser"})
+LAYERS = ("core", "reference", "process", "browser")
+PROCESS_FOLDERS = frozenset({"process", "supervise", "pipeline"})
 HERE = Path(__file__).parent
 
 settings.register_profile("house", deadline=None, print_blob=True)  # no deadline: the machine may be busy
@@ -31,7 +32,7 @@ def layer_of(path: Path) -> str:
     room = path.relative_to(HERE).parts[0]
     if room in PROCESS_FOLDERS:
         return "process"
-    return "reference" if room == "reference" else "core"
+    return room if room in ("reference", "browser") else "core"
 
 
 def pytest_collection_modifyitems(items: list[pytest.Item]) -> None:

@@ -175,8 +175,8 @@ def test_other_methods_are_405_and_options_say_which(served: Served, path: str) 
     assert served.get("/nothing", method="OPTIONS").status == 404
 
 
-ANSWERS = ["/", "/api", "/page.js", "/page.css", "/livez", "/readyz", "/openapi.json", "/api/v1/map", "/nothing",
-           "/api/v1/map?bins=0", "/api/v1/map?format=png"]  # fmt: skip
+ANSWERS = ["/", "/plain", "/api", "/page.js", "/page.css", "/livez", "/readyz", "/openapi.json", "/api/v1/map",
+           "/nothing", "/api/v1/map?bins=0", "/api/v1/map?format=png"]  # fmt: skip
 
 
 @pytest.mark.parametrize("path", ANSWERS)
@@ -207,7 +207,7 @@ class Links(HTMLParser):
         self.inline += any(name.startswith("on") for name in given)
 
 
-@pytest.mark.parametrize("path", ["/", "/api"])
+@pytest.mark.parametrize("path", ["/plain", "/api"])
 def test_pages_load_nothing_from_elsewhere_and_every_link_leads_somewhere(served: Served, path: str) -> None:
     answer = served.get(path)
     assert answer.headers["content-type"] == "text/html; charset=utf-8"
@@ -221,7 +221,7 @@ def test_pages_load_nothing_from_elsewhere_and_every_link_leads_somewhere(served
 
 
 def test_start_page_says_the_cautions_and_leads_to_the_calls(served: Served) -> None:
-    page = served.get("/").body.decode()
+    page = served.get("/plain").body.decode()
     for words in ("Not a navigation or collision-avoidance aid", "50 to 2400 Hz", "port from starboard", 'href="/api"'):
         assert words in page
 

@@ -12,7 +12,7 @@ from openapi_spec_validator import OpenAPIV31SpecValidator
 from web_rig import Served, serving
 
 CALLS = ["/livez", "/readyz", "/api/v1/status", "/api/v1/health", "/api/v1/levels", "/api/v1/array", "/api/v1/map",
-         "/api/v1/spectrum"]  # fmt: skip
+         "/api/v1/spectrum", "/api/v1/history"]  # fmt: skip
 
 
 @pytest.fixture(scope="module")

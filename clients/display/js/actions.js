@@ -25,7 +25,7 @@ function zoomActions(d) {
     { id: "zoom-in", keys: ["+", "="], shown: "+", text: "zoom in about the pointer (or the wheel)", button: "zoom in",
       run: () => d.zoom(0.5) },
     { id: "zoom-out", keys: ["-", "_"], shown: "-", text: "zoom out", button: "out", run: () => d.zoom(2) },
-    { id: "zoom-all", keys: ["0"], shown: "0", text: "the whole band", button: "whole band", run: () => d.zoom(Infinity) },
+    { id: "zoom-all", keys: ["0"], shown: "0", text: "the whole band", button: "whole", run: () => d.zoom(Infinity) },
     { id: "pan-down", keys: [","], shown: ",", text: "to lower frequencies", run: () => d.pan(-0.25) },
     { id: "pan-up", keys: ["."], shown: ".", text: "to higher frequencies", run: () => d.pan(0.25) },
   ];

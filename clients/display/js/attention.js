@@ -63,16 +63,26 @@ function mapItems(now) {
 }
 
 /** @param {Situation} now @returns {Item[]} */
+function hydrophoneItems(now) {
+  const channels = now.health?.channels ?? [];
+  const dead = channels.filter((c) => c.state === "dead");
+  const doubtful = channels.filter((c) => !["good", "not judged", "excluded", "dead"].includes(c.state));
+  const named = (/** @type {typeof channels} */ list) => `Hydrophone${list.length > 1 ? "s" : ""} `
+    + list.slice(0, 4).map((c) => c.i).join(", ") + (list.length > 4 ? " ..." : "");
+  /** @type {Item[]} */
+  const items = [];
+  if (dead.length > 0) items.push({ kind: "caution", text: `${named(dead)} dead and left out of the beams. Log it.` });
+  if (doubtful.length > 0) items.push({ kind: "caution", text: `${named(doubtful)} in doubt: judge levels with care.` });
+  return items;
+}
+
+/** @param {Situation} now @returns {Item[]} */
 function lasting(now) {
   /** @type {Item[]} */
   const items = [];
   const load = now.status?.load ?? 0;
   if (load > 0.9) items.push({ kind: "caution", text: `Load ${Math.round(100 * load)} %: hops will be dropped above 100 %.` });
-  const bad = (now.health?.channels ?? []).filter((c) => c.state !== "good" && c.state !== "not judged" && c.state !== "excluded");
-  if (bad.length > 0) {
-    const names = bad.slice(0, 4).map((c) => c.i).join(", ");
-    items.push({ kind: "caution", text: `Hydrophone${bad.length > 1 ? "s" : ""} ${names}${bad.length > 4 ? " ..." : ""}: see the strip.` });
-  }
+  items.push(...hydrophoneItems(now));
   if (!now.calibrated) items.push({ kind: "caution", text: "Uncalibrated: levels are relative. Enter the calibration." });
   if (now.reload) items.push({ kind: "caution", text: "The service is of another version. Load this page anew." });
   return items;

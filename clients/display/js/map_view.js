@@ -80,16 +80,10 @@ function drawAlias(ctx, plot, scene) {
       rowOf(plot, Math.cos((beam.cone_deg * Math.PI) / 180))]);
   }
   if (!points.some(([x]) => x < plot.left + plot.width)) return;
-  for (const [colour, width] of /** @type {[string, number][]} */ ([["#000000", 3], [scene.look.palette.mean, 1.5]])) {
-    ctx.strokeStyle = colour;
-    ctx.lineWidth = width;
-    ctx.setLineDash([7, 5]);
-    ctx.beginPath();
-    points.forEach(([x, y], i) => (i === 0 ? ctx.moveTo(x, y) : ctx.lineTo(x, y)));
-    ctx.stroke();
+  for (let i = 1; i < points.length; i += 3) {
+    const [from, to] = [points[i - 1], points[Math.min(i + 1, points.length - 1)]];
+    visible(ctx, from[0], from[1], to[0], to[1], scene.look);
   }
-  ctx.setLineDash([]);
-  ctx.lineWidth = 1;
   const inside = points.filter(([x]) => x > plot.left + 20 && x < plot.left + plot.width - 120);
   const at = inside[Math.floor(inside.length * 0.12)] ?? null;
   if (at !== null) label(ctx, scene.look, "images beyond", at[0] + 6, at[1] - scene.look.small / 2);

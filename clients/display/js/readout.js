@@ -21,8 +21,7 @@ export function pointerPairs(scene) {
   return [
     ["Frequency", frequency(cursor.hz)],
     ["Cone angle", `${bearing(angleDeg(cursor.cos))} from forward`],
-    ["Either", starboard],
-    ["or", port],
+    ["Relative", `${starboard} or ${port}`],
     ["True", "-- no heading"],
     ["Beamwidth", width === null ? "no bearing here" : `${width.toFixed(1)}° at half power`],
     ["Level", valid ? `${level(here)} re 1 µPa²/Hz` : "--.- dB (stale)"],

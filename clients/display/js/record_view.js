@@ -107,13 +107,12 @@ export class RecordView {
   spread(columns, stepMs) {
     const reach = Math.ceil(600 / stepMs);
     const beams = this.sums.length / columns;
-    for (let column = columns - 2; column >= 0; column--) {
-      if (this.maps[column] > 0) continue;
-      for (let next = column + 1; next < Math.min(columns, column + reach + 1); next++) {
-        if (this.maps[next] === 0) continue;
+    let next = Infinity; // the nearest column to the right that has rows of its own
+    for (let column = columns - 1; column >= 0; column--) {
+      if (this.maps[column] > 0) next = column;
+      else if (next - column <= reach) {
         this.maps[column] = this.maps[next];
         this.sums.copyWithin(column * beams, next * beams, (next + 1) * beams);
-        break;
       }
     }
   }

@@ -3,7 +3,7 @@
  * Level over bearing at the pointer's frequency, and under it what all beams would read of one plane wave from the beam
  * under the pointer, at the level there: what stands out of it is something else.
  */
-import { border, clear, sideways, staleMark, visible } from "./axes.js";
+import { border, clear, label, sideways, staleMark, visible } from "./axes.js";
 import { patternLevels, widthInCosine } from "./beams.js";
 import { beamAt, binAt, levelAt } from "./frame.js";
 import { angleTicks, place, rowOf, ticks } from "./scale.js";
@@ -24,7 +24,7 @@ export class ResponseView {
   draw(surface, scene) {
     const { ctx } = surface;
     const { look, map } = scene;
-    const right = look.small * 5.6;
+    const right = look.small * 6.4;
     const bottom = look.small * 2.4 + 8;
     const plot = { left: 4, top: 4, width: Math.max(10, surface.width - right - 4), height: Math.max(10, surface.height - bottom - 4) };
     clear(ctx, look, surface.width, surface.height);
@@ -41,6 +41,10 @@ export class ResponseView {
     if (scene.cursor !== null) {
       const y = rowOf(plot, scene.cursor.cos);
       visible(ctx, plot.left, y, plot.left + plot.width, y, look, [6, 4]);
+    }
+    if (this.wave >= 0) {
+      label(ctx, look, "line: beams", plot.left + 4, plot.top + 4);
+      label(ctx, look, "filled: one plane wave", plot.left + 4, plot.top + 10 + look.small);
     }
     staleMark(ctx, look, plot, scene.freshness, scene.ageS);
     ctx.restore();
@@ -144,5 +148,5 @@ function sides(ctx, plot, scene) {
     ctx.fillText(`${String(angle).padStart(3, "0")}${other}`, x + 6, y);
   }
   ctx.stroke();
-  sideways(ctx, "relative, ° starboard|port", x + look.small * 5.2, plot.top + plot.height / 2);
+  sideways(ctx, "relative, ° starboard|port", x + look.small * 5.9, plot.top + plot.height / 2);
 }

@@ -28,9 +28,18 @@ export function showState(d) {
   const p99 = band?.latency_ms.p99 ?? null;
   page.text("latency", open && p99 !== null ? `${Math.round(p99)} ms (p99)` : "-- ms");
   page.mark("calibration", "■ uncalibrated: levels are relative", "caution", d.array?.calibrated ?? true);
-  page.text("used", d.health === null ? "" : `${d.health.used} of ${d.health.channels.length} hydrophones used`);
-  page.text("strip-text", stripText(d.health));
+  page.text("used", d.health === null ? "" : `· ${d.health.used} of ${d.health.channels.length} hydrophones used`);
+  page.text("strip-text", [stripText(d.health), countsText(d)].filter((text) => text !== "").join(" · "));
   showTitles(d);
+}
+
+/** What was lost on the way, since the service was started. @param {Display} d */
+function countsText(d) {
+  if (d.status === null) return "";
+  const dropped = Object.values(d.status.dropped).reduce((sum, n) => sum + n, 0);
+  const hops = d.band === null ? 0 : (d.status.bands[d.band.name]?.dropped_hops ?? 0);
+  return `gaps ${d.status.gaps} (${d.status.lost_samples} samples lost), messages dropped ${dropped}, hops dropped ${hops}, `
+    + `maps not shown here ${d.skipped}`;
 }
 
 /** @param {Display} d */
@@ -59,14 +68,14 @@ export function showCursor(d) {
   page.text("pin", d.pinned ? "held" : "");
   if (cursor === null) return;
   page.text("spectrum-title", `solid: beam ${bearing(angleDeg(cursor.cos))}; dashed: mean over beams (power)`);
-  page.text("response-title", `at ${frequency(cursor.hz)}; filled: one plane wave`);
+  page.text("response-title", `at ${frequency(cursor.hz)}`);
 }
 
 /** Buttons as they are chosen, and the cautions with the bands named. @param {Display} d */
 export function showChoices(d) {
   const { page, choices } = d;
   for (const band of d.array?.bands ?? []) page.button(`band-${band.name}`, `band ${band.name}`, band.name === d.band?.name);
-  page.button("zoom-all", "whole band", d.zoomed === null);
+  page.button("zoom-all", "whole", d.zoomed === null);
   page.button("pin", "hold", d.pinned);
   page.button("span", `record ${choices.spanS / 60} min`, false);
   page.button("part", choices.part === null ? "range: all" : `range ${choices.part + 1} of ${Math.max(1, d.rangesHz.length)}`, false);

@@ -47,7 +47,7 @@ function glyph(ctx, look, state, x, y, w, h, inBand) {
   ctx.fillStyle = palette.text;
   if (state === "good") {
     const top = inBand ? y : y + h * 0.55; // half as high: not of this band
-    ctx.globalAlpha = 0.75;
+    ctx.globalAlpha = 0.5;
     ctx.fillRect(x, top, w, y + h - top);
     ctx.globalAlpha = 1;
     return;

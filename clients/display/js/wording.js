@@ -16,7 +16,7 @@ export function bearing(deg) {
 /** Both sides: a line cannot tell them apart. @param {number} cos */
 export function bothSides(cos) {
   const cone = angleDeg(cos);
-  return [`R ${bearing(cone)} starboard`, `R ${bearing((360 - cone) % 360)} port`];
+  return [`R ${bearing(cone)} starboard`, `${bearing((360 - cone) % 360)} port`];
 }
 
 /** @param {number} hz */

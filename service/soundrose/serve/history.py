@@ -1,12 +1,13 @@
 """process: `GET /api/v1/history`: levels over bearing of the last hour, for a screen that was not there."""
 
+import struct
 from functools import partial
 from secrets import token_hex
 from typing import Annotated, Any, Literal
 
 import msgpack
 import numpy as np
-from fastapi import FastAPI, Query, Request, Response
+from fastapi import FastAPI, Query, Response
 from pydantic import BaseModel, ConfigDict, Field
 from pydantic_core import to_json
 
@@ -111,7 +112,6 @@ def add_history(app: FastAPI, source: Source, workshop: Workshop) -> History:
                    **problems(404, 422)},
     )  # fmt: skip
     async def get_history(
-        request: Request,
         band: Annotated[str | None, Query(description="name of a band; the first configured by default")] = None,
         since: Annotated[str | None, Query(pattern=_CURSOR, description="a `next` of an earlier answer")] = None,
         part: Annotated[
@@ -135,12 +135,12 @@ def add_history(app: FastAPI, source: Source, workshop: Workshop) -> History:
         span_ns = None if span_s is None else round(span_s * 1e9)
         place = history.place(since)
         rows = ring.rows(place, most, part, span_ns)
-        message = source.latest.get(f"map/{name}")
         head = _head(source, history, ring, name, part, rows)
-        head["newest_age_s"] = None if message is None else round(source.now() - message.heard_s, 3)
-        # one of a kind: nobody else has this age, so it is made each time
-        answer = await workshop.make(f"history {name} {id(request)}", partial(_make, head, rows, format))
-        return Response(answer.body, media_type=answer.media_type)
+        key = f"history {head['first']} {head['next']} {ring.count} {name} {part} {format}"
+        answer = await workshop.make(key, partial(_make, head, rows, format))
+        message = source.latest.get(f"map/{name}")
+        age_s = None if message is None else round(source.now() - message.heard_s, 3)
+        return Response(_with_age(answer.body, format, age_s), media_type=answer.media_type)
 
     return history
 
@@ -164,6 +164,7 @@ def _head(source: Source, history: History, ring: BandRing, band: str, part: int
 
 
 def _make(head: dict[str, Any], rows: Rows, format: str) -> Answer:
+    """The answer but for the age of the newest map, which is another each time it is asked for."""
     if format == "json":
         levels = np.round(rows.level_db.astype(np.float64), 2).tolist()
         return Answer(to_json({**head, "level_db": levels}), "application/json", {})
@@ -171,5 +172,13 @@ def _make(head: dict[str, Any], rows: Rows, format: str) -> Answer:
     if rows.level_db.size:
         floor, step, found = quantised(rows.level_db)
         data = found.tobytes()
-    body = msgpack.packb({**head, "floor_db": floor, "step_db": step, "level": data})
-    return Answer(bytes(body), "application/msgpack", {})
+    pairs = {**head, "floor_db": floor, "step_db": step, "level": data}
+    packed = b"".join(msgpack.packb(key) + msgpack.packb(value) for key, value in pairs.items())
+    return Answer(b"\xde" + struct.pack(">H", len(pairs) + 1) + packed, "application/msgpack", {})  # map 16
+
+
+def _with_age(body: bytes, format: str, age_s: float | None) -> bytes:
+    """The answer with its last pair."""
+    if format == "json":
+        return b"".join((body[:-1], b',"newest_age_s":', to_json(age_s), b"}"))
+    return body + bytes(msgpack.packb("newest_age_s")) + bytes(msgpack.packb(age_s))
