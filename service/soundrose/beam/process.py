@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 import zmq
+from zmq.utils.monitor import recv_monitor_message
 
 from soundrose.beam.stage import BandStage
 from soundrose.child import HEARTBEAT_S, Heartbeat, Orders, SlowLog, clock_name, new_start, set_up_child
@@ -68,7 +69,7 @@ class BandProcess:
         self._start = new_start()
         self._log = SlowLog()
         self._heart = heart
-        self._ingest = ""
+        self._ingest, self._session = "", self._start
         self._stage = BandStage(orders.settings, band, progress=self.beat)
         self._times = BandTimes(orders.settings.feed.rate_hz)
         self._maps = self._dropped_hops = self._taken = 0
@@ -80,6 +81,9 @@ class BandProcess:
         self._hops.setsockopt(zmq.RECONNECT_IVL, 20)
         self._hops.setsockopt(zmq.RECONNECT_IVL_MAX, 200)
         self._hops.setsockopt(zmq.IMMEDIATE, 1)
+        self._hops.setsockopt(zmq.HEARTBEAT_IVL, 2000)  # a host that vanished without a word: the connection ends
+        self._hops.setsockopt(zmq.HEARTBEAT_TIMEOUT, 10000)
+        self._lost = self._hops.get_monitor_socket(zmq.EVENT_DISCONNECTED)
         self._hops.connect(orders.endpoints["stream"])
         self._publisher = Publisher(
             context,
@@ -96,6 +100,8 @@ class BandProcess:
 
     def turn(self) -> None:
         """Once round: take what came from ingest, or wait a little for it."""
+        if self._lost.poll(0):
+            self._begin_session()
         if time.monotonic() >= self._report_due:
             self._report()
         if not self._hops.poll(_POLL_MS):
@@ -111,7 +117,7 @@ class BandProcess:
                     self._ingest, self._taken = message.ingest, 0
                     self._same_clock = message.clock == clock_name()
                 self._report()
-            case Given():
+            case Given(session=self._session):
                 self._take(message)
                 self._taken += 1
                 self._report()
@@ -131,12 +137,21 @@ class BandProcess:
             self._heart.beat(ready=self.joined, facts=self.facts() if self.joined else None)
 
     def close(self) -> None:
+        self._hops.disable_monitor()
+        self._lost.close()
         self._hops.close()
         self._publisher.close()
 
+    def _begin_session(self) -> None:
+        """The connection ended, and with it the hops that were on their way: join anew."""
+        while self._lost.poll(0):
+            recv_monitor_message(self._lost)
+        self._session, self._taken = new_start(), 0
+        self._report_due = 0.0
+
     def _report(self) -> None:
         self._report_due = time.monotonic() + HEARTBEAT_S
-        report = Report(self._band.name, self._start, self._ingest, self._taken)
+        report = Report(self._band.name, self._session, self._ingest, self._taken)
         try:
             self._hops.send(encode_report(report), zmq.NOBLOCK)
         except zmq.Again:  # ingest is away; the next report says the same

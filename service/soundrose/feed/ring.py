@@ -34,17 +34,19 @@ class Given:
     """One hop for one band: the notes that come before it, and how many hops the band missed before it.
 
     resumed : the first since the band's process or ingest was started anew; to the band it comes after a gap.
+    session : what the band called itself when it joined; a hop for another session is not for it.
     """
 
     hop: Hop
     notes: tuple[Note, ...]
     missed: int
     resumed: bool = False
+    session: str = ""
 
 
 @dataclass(slots=True)
 class _Band:
-    session: str = ""  # start of the band process that joined last; "" = never
+    session: str = ""  # connection of a band process that joined last; "" = never
     cursor: int = 0  # ordinal of the hop to give next
     acknowledged: int = 0  # ordinal after the last hop it is done with
     note: int = 0  # ordinal of the note to give next
@@ -105,7 +107,7 @@ class HopRing:
         band.taken = 0
 
     def session(self, name: str) -> str:
-        """Start of the band process that joined last, "" if none has. KeyError: no such band."""
+        """Session of the band that joined last, "" if none has. KeyError: no such band."""
         return self._bands[name].session
 
     def acknowledge(self, name: str, taken: int) -> None:
@@ -131,7 +133,7 @@ class HopRing:
         band.waiting = ()
         band.given.append(band.cursor)
         band.cursor += 1
-        return Given(hop, notes, missed, resumed)
+        return Given(hop, notes, missed, resumed, band.session)
 
     @property
     def _window(self) -> int:

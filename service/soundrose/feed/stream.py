@@ -1,10 +1,13 @@
 """codec: hops from ingest to bands, and what bands answer (inside the service; not part of the contract).
 
 ROUTER (ingest, bound) and DEALER (band). A band says, at once when it is done with a hop and else every quarter second,
-`[msgpack [band, session, ingest, taken]]`: `session` names its process, `ingest` the ingest process it believes it
-talks to ("" at first). Ingest answers one that names another with `[b"welcome", msgpack [ingest, clock]]`, from which
-`taken` counts anew; `clock` names the monotonic clock that `received_ns` was read from. A hop is `[b"hop", msgpack
-head, samples, times, bad, clipped]`, arrays little-endian, C order.
+`[msgpack [band, session, ingest, taken]]`: `session` names one connection of its process, `ingest` the ingest process it
+believes it talks to ("" at first). Ingest answers one that names another with `[b"welcome", msgpack [ingest, clock]]`,
+from which `taken` counts anew; `clock` names the monotonic clock that `received_ns` was read from. A hop is `[b"hop",
+msgpack head, samples, times, bad, clipped]`, arrays little-endian, C order; the head names the session it is for.
+
+Hops on their way are lost with a connection, and ingest cannot see it: the band's count would stand still for ever. So a
+band whose connection ends takes a new session, with which it joins anew, and leaves hops of the old one alone.
 """
 
 from collections.abc import Sequence
@@ -69,6 +72,7 @@ def encode_given(given: Given) -> list[Any]:
         "received_ns": hop.received_ns,
         "missed": given.missed,
         "resumed": given.resumed,
+        "session": given.session,
         "notes": [_note_plain(note) for note in given.notes],
     }
     arrays = (hop.samples, hop.times, hop.bad, hop.clipped)
@@ -93,7 +97,8 @@ def decode_given(parts: Sequence[bytes | memoryview]) -> Given | Welcome:
             clipped=np.frombuffer(clipped, "<i4"),
             received_ns=head["received_ns"],
         )
-        return Given(hop, tuple(_note_from(plain) for plain in head["notes"]), head["missed"], head["resumed"])
+        notes = tuple(_note_from(plain) for plain in head["notes"])
+        return Given(hop, notes, head["missed"], head["resumed"], head["session"])
     except (ValueError, TypeError, KeyError, IndexError) as error:
         raise WireError("stream", f"a hop cannot be read: {error!r}") from error
 
