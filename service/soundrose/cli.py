@@ -120,7 +120,9 @@ def demo(
 
 def _mount_feed() -> None:
     from soundrose.feed.command import feed_app
+    from soundrose.scene.command import mount_scene
 
+    mount_scene(feed_app)
     app.add_typer(feed_app, name="feed", help="Act as an array: send a recording or a scene to a service.")
 
 

@@ -115,9 +115,7 @@ class _Reverberation:
         self._emitter, number = _named(scene, scene.reverberation.source)
         assert isinstance(self._emitter.sound, Events)
         self._table = Timetable(self._emitter.sound, emitter_seed(scene, number))
-        covariance = reverberation_covariance(
-            scene.reverberation, frequency_hz, places, scene.water.sound_speed_m_s
-        )
+        covariance = reverberation_covariance(scene.reverberation, frequency_hz, places, scene.water.sound_speed_m_s)
         self._noise = FieldNoise(covariance, scene.rate_hz, late_s, (scene.seed, 1))
         self._line, self._water = line, scene.water
         self._shots: list[float] = []

@@ -21,8 +21,8 @@ LEAST_FLOW_HZ = 2.0  # below it the flow's level stays what it is there
 def coherence(shape: AmbientShape, k_rad_m: Floats, positions_m: Floats) -> Floats:
     """(bins, channels, channels) coherence between hydrophones.
 
-    shape : "isotropic", sin(kd)/(kd), or "surface", 2 J1(kd)/(kd): sources near the surface, each a vertical dipole, for
-    hydrophones at one depth (their z is not looked at).  k_rad_m : (bins,) wavenumbers.  positions_m : (channels, 3).
+    shape : "isotropic", sin(kd)/(kd), or "surface", 2 J1(kd)/(kd): sources near the surface, each a vertical dipole,
+    for hydrophones at one depth (their z is not looked at).  k_rad_m : (bins,) wavenumbers.  positions_m : (channels, 3).
 
     References
     ----------
@@ -84,7 +84,9 @@ class FieldNoise:
     late_s : (channels,) by which each channel is sampled late.  seed : with a hop's number it decides everything.
     """
 
-    def __init__(self, covariance: NDArray[np.complex128] | Floats, rate_hz: float, late_s: Floats, seed: tuple[int, ...]):
+    def __init__(
+        self, covariance: NDArray[np.complex128] | Floats, rate_hz: float, late_s: Floats, seed: tuple[int, ...]
+    ):
         bins, self.channels = covariance.shape[:2]
         self.hop = bins - 1
         self._seed, self._taper = seed, sine_taper(2 * self.hop)

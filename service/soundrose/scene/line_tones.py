@@ -17,7 +17,9 @@ WANDER, WANDER_HZ = 0.8, 0.07  # radians by which its phase wanders
 class Tones:
     """Tones with a slowly changing complex amplitude on each channel, linear from knot to knot."""
 
-    def __init__(self, frequency_hz: float, amplitude: NDArray[np.complex128], lag_s: Floats, breathes: bool, phase: float):
+    def __init__(
+        self, frequency_hz: float, amplitude: NDArray[np.complex128], lag_s: Floats, breathes: bool, phase: float
+    ):
         """amplitude : (channels,) steady part.  lag_s : (channels,) by which the slow changes come later there."""
         self.frequency_hz, self._amplitude, self._lag, self._phase = frequency_hz, amplitude, lag_s, phase
         self._breathes = breathes

@@ -102,9 +102,10 @@ class Line:
 
     def shape(self, t_s: float) -> Floats:
         """(channels, 3) places in the array frame (x forward, y starboard, z down) about their mean, m."""
-        away = self.places(np.float64(t_s)[None])[0]
+        t = np.array([t_s])
+        away = self.places(t)[0]
         away = away - away.mean(axis=0)
-        heading, pitch = float(self.heading(np.float64(t_s)[None])[0]), float(self._pitch)
+        heading, pitch = float(self.heading(t)[0]), float(self._pitch)
         ahead = away[:, 0] * np.cos(heading) + away[:, 1] * np.sin(heading)
         side = -away[:, 0] * np.sin(heading) + away[:, 1] * np.cos(heading)
         x = ahead * np.cos(pitch) - away[:, 2] * np.sin(pitch)

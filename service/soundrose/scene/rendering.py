@@ -47,11 +47,12 @@ def absorption_db_km(water: Water, frequency_hz: Floats, depth_m: float) -> Floa
 
 
 def _table() -> NDArray[np.float32]:
-    """(PHASES + 1, TAPS) interpolation kernels: sinc under a Kaiser window, for signals below a quarter of their rate."""
+    """(PHASES + 1, TAPS) kernels: sinc under a Kaiser window, for signals below a quarter of their rate."""
     x = np.arange(TAPS) - (TAPS // 2 - 1) - np.arange(PHASES + 1)[:, None] / PHASES
     window = np.i0(BETA * np.sqrt(np.clip(1 - (x / (TAPS / 2)) ** 2, 0, None))) / np.i0(BETA)
     kernels = np.sinc(x) * window
-    return (kernels / kernels.sum(axis=1, keepdims=True)).astype(np.float32)
+    whole: NDArray[np.float32] = (kernels / kernels.sum(axis=1, keepdims=True)).astype(np.float32)
+    return whole
 
 
 @dataclass(frozen=True, slots=True)
@@ -131,8 +132,8 @@ class _Source:
         return np.stack(made)
 
     def weights(self, knot: int) -> tuple[Floats, Floats, NDArray[np.float32]]:
-        """At KNOTS knots from `knot` on: delay (ways, KNOTS, channels), samples, and amplitude of each hydrophone against
-        the origin; absorption (ways, KNOTS, bins)."""
+        """At KNOTS knots from `knot` on: delay against the origin, samples, and amplitude, both (ways, KNOTS, channels);
+        absorption (ways, KNOTS, bins)."""
         t = np.arange(knot, knot + KNOTS) * self._steps.step / self._steps.rate_hz
         arrival = arrivals(self.emitter, self._line, self._water, t)
         later = hydrophone_delays(arrival, self._line, self._water, t)
@@ -146,7 +147,12 @@ class Renderer:
     """Every emitter at every hydrophone, chunk after chunk of KNOTS * step samples, from time 0 on."""
 
     def __init__(
-        self, emitters: Sequence[tuple[Emitter, tuple[int, ...]]], line: Line, water: Water, steps: Steps, rate_hz: float
+        self,
+        emitters: Sequence[tuple[Emitter, tuple[int, ...]]],
+        line: Line,
+        water: Water,
+        steps: Steps,
+        rate_hz: float,
     ) -> None:
         self._steps, self._channels = steps, line.channels
         self._sources = [_Source(emitter, line, water, steps, seed, rate_hz) for emitter, seed in emitters]

@@ -1,4 +1,4 @@
-"""core: a scene as frozen values, checked once when its file was read: what there is in the sea, at the array, aboard."""
+"""core: a scene as frozen values, checked once when its file was read: the sea, the array, what sounds and fails."""
 
 from dataclasses import dataclass, field
 from typing import Literal, TypeAlias
@@ -9,9 +9,30 @@ from soundrose.scene.track import Way
 from soundrose.settings_types import ArraySettings, CalibrationSettings
 
 __all__ = [
-    "Ambient", "AmbientShape", "Clicks", "Emitter", "Events", "FaultState", "Fault", "Flow", "Gap", "Hum", "Motor",
-    "NavigationSending", "Own", "Pulse", "Range", "Reverberation", "Scene", "Schedule", "Shape", "Shot", "Sound", "Strum",
-    "Sweep", "Water",
+    "Ambient",
+    "AmbientShape",
+    "Clicks",
+    "Emitter",
+    "Events",
+    "Fault",
+    "FaultState",
+    "Flow",
+    "Gap",
+    "Hum",
+    "Motor",
+    "NavigationSending",
+    "Own",
+    "Pulse",
+    "Range",
+    "Reverberation",
+    "Scene",
+    "Schedule",
+    "Shape",
+    "Shot",
+    "Sound",
+    "Strum",
+    "Sweep",
+    "Water",
 ]  # fmt: skip
 
 Range = tuple[float, float]
@@ -186,8 +207,8 @@ class Strum:
 
 @dataclass(frozen=True, slots=True)
 class Fault:
-    """What ails a hydrophone between two times. other : the one it is exchanged with.  amount : dB of a noisy one,
-    gain in dB of a clipped one, share of time of an intermittent one."""
+    """What ails a hydrophone between two times. other : the one it is exchanged with.  amount : spectral density of
+    what a noisy one adds, dB re 1 µPa²/Hz; gain in dB of a clipped one; share of time of an intermittent one."""
 
     channel: int
     state: FaultState

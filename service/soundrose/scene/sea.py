@@ -5,7 +5,7 @@ from typing import Literal
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-__all__ = ["Absorption", "ambient_db", "ainslie_mccolm", "francois_garrison", "wenz_parts_db"]
+__all__ = ["Absorption", "ainslie_mccolm", "ambient_db", "francois_garrison", "wenz_parts_db"]
 
 Absorption = Literal["francois-garrison", "ainslie-mccolm", "none"]
 Floats = NDArray[np.float64]

@@ -50,7 +50,9 @@ class SpectralNoise:
         return tapered
 
 
-def join_frames(frames: NDArray[np.float32], tail: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
+def join_frames(
+    frames: NDArray[np.float32], tail: NDArray[np.float32]
+) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
     """Joins tapered frames to a stream.
 
     frames : (channels, frames, length).  tail : (channels, length/2), what the frame before left over.

@@ -6,6 +6,7 @@ before its beginning (straight on backwards) and after its end (the last piece g
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from math import atan2, cos, hypot, pi, sin, tan
 
 import numpy as np
@@ -84,18 +85,15 @@ def _arc(length: Floats | np.float64, curvature: Floats | np.float64) -> tuple[F
 
 def legs_way(start: tuple[float, float], course_deg: float, speed_m_s: float, legs: Sequence[Leg]) -> Way:
     """From a start on a course, then leg after leg; straight on after the last."""
-    pieces = []
-    for leg in legs:
-        if speed_m_s > 0:
-            pieces.append((leg.seconds * speed_m_s, np.deg2rad(leg.turn_deg_s) / speed_m_s))
+    pieces = [(leg.seconds * speed_m_s, float(np.deg2rad(leg.turn_deg_s)) / speed_m_s) for leg in legs if speed_m_s > 0]
     return Way(start, float(np.deg2rad(course_deg)), [*pieces, (1.0, 0.0)], speed_m_s)
 
 
 def waypoints_way(points: Sequence[tuple[float, float]], speed_m_s: float, radius_m: float) -> Way:
     """Through (north, east) points, corners rounded off with `radius_m`, or less where legs are too short for it."""
     pieces: list[tuple[float, float]] = []
-    headings = [atan2(b[1] - a[1], b[0] - a[0]) for a, b in zip(points, points[1:], strict=False)]
-    lengths = [hypot(b[0] - a[0], b[1] - a[1]) for a, b in zip(points, points[1:], strict=False)]
+    headings = [atan2(b[1] - a[1], b[0] - a[0]) for a, b in pairwise(points)]
+    lengths = [hypot(b[0] - a[0], b[1] - a[1]) for a, b in pairwise(points)]
     used = 0.0
     for i, length in enumerate(lengths):
         cut = turn = radius = 0.0

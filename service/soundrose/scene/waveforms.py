@@ -16,7 +16,17 @@ from numpy.typing import NDArray
 from soundrose.scene.scene_types import Clicks, Events, Motor, Pulse, Range, Schedule, Shape, Shot, Sound, Sweep
 from soundrose.scene.spectral_noise import SpectralNoise
 
-__all__ = ["LOT", "Event", "Timetable", "Waveform", "WaveformBuffer", "band_edge", "motor_density", "shape_samples", "waveform"]
+__all__ = [
+    "LOT",
+    "Event",
+    "Timetable",
+    "Waveform",
+    "WaveformBuffer",
+    "band_edge",
+    "motor_density",
+    "shape_samples",
+    "waveform",
+]
 
 Floats = NDArray[np.float64]
 LOT: Final = 4096  # samples
