@@ -113,7 +113,7 @@ def test_hop_that_was_lost_with_the_connection_comes_again(rig):
 
 
 def test_hop_for_an_earlier_session_is_left_alone(rig):
-    ingest, band = rig
+    ingest, _ = rig
     report = ingest.report()
     ingest.welcome(report)
     ingest.ring.add_hop(hop(0))

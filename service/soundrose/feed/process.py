@@ -23,8 +23,11 @@ __all__ = ["IngestProcess", "feed_queue", "main"]
 
 LARGEST_FRAME = 96 * 2**20  #: contract: a larger frame cuts its connection
 _QUEUE_BYTES = 128 * 2**20
-_BATCH = 32  #: feed messages between two looks at the bands
+_BATCH = 32  #: feed messages between two looks at the bands ...
+_BATCH_S = 0.1  #: ... or what comes in this time: a block of 64 MiB may take a second
+_REPORT_BYTES = 64 * 1024  #: a band's report is far smaller
 _POLL_MS = 100
+_ASK_MS, _ANSWER_MS = 5000, 15000  #: a source is asked so often whether it is there, and has so long to answer
 
 
 def feed_queue(settings: Settings) -> int:
@@ -54,12 +57,12 @@ class IngestProcess:
         self._feed.setsockopt(zmq.RCVHWM, feed_queue(settings))
         self._feed.setsockopt(zmq.MAXMSGSIZE, LARGEST_FRAME)
         self._feed.setsockopt(zmq.LINGER, 0)
-        self._feed.setsockopt(zmq.HEARTBEAT_IVL, 5000)
-        self._feed.setsockopt(zmq.HEARTBEAT_TIMEOUT, 15000)
+        _keep_alive(self._feed, settings.feed.overload == "hold")
         self._monitor = self._feed.get_monitor_socket(zmq.EVENT_DISCONNECTED)
         self._bands = context.socket(zmq.ROUTER)
         self._bands.setsockopt(zmq.LINGER, 0)
         self._bands.setsockopt(zmq.SNDHWM, 64)
+        self._bands.setsockopt(zmq.MAXMSGSIZE, _REPORT_BYTES)
         self._bands.setsockopt(zmq.ROUTER_HANDOVER, 1)
         bind_or_explain(self._bands, orders.endpoints["stream"], "stream.bind")
         self.endpoint = bind_or_explain(self._feed, orders.endpoints["feed"], "feed.bind")
@@ -102,6 +105,7 @@ class IngestProcess:
         self._reading = wanted
 
     def _take_feed(self) -> None:
+        until = time.monotonic() + _BATCH_S
         for _ in range(_BATCH):
             try:
                 frames = self._feed.recv_multipart(zmq.NOBLOCK, copy=False)
@@ -109,7 +113,7 @@ class IngestProcess:
                 return
             self._take_message([frame.buffer for frame in frames])
             self._hand_on()
-            if self._ring.blocked:
+            if self._ring.blocked or time.monotonic() > until:
                 return
 
     def _take_message(self, parts: list[memoryview]) -> None:
@@ -157,6 +161,22 @@ class IngestProcess:
         for band in self._ring.bands:
             while (given := self._ring.take(band)) is not None:
                 self._bands.send_multipart([band.encode(), *encode_given(given)], copy=False)
+
+
+def _keep_alive(feed: "zmq.Socket[bytes]", hold: bool) -> None:
+    """Notice a source that vanished without a word.
+
+    In `hold` a source may have to wait for as long as it takes. Its answers to heartbeats wait behind its samples
+    then, and a heartbeat would cut the connection and lose what was in flight: the kernel asks there, not ZeroMQ.
+    """
+    if not hold:
+        feed.setsockopt(zmq.HEARTBEAT_IVL, _ASK_MS)
+        feed.setsockopt(zmq.HEARTBEAT_TIMEOUT, _ANSWER_MS)
+        return
+    feed.setsockopt(zmq.TCP_KEEPALIVE, 1)
+    feed.setsockopt(zmq.TCP_KEEPALIVE_IDLE, 5)
+    feed.setsockopt(zmq.TCP_KEEPALIVE_INTVL, 5)
+    feed.setsockopt(zmq.TCP_KEEPALIVE_CNT, 3)
 
 
 def main(orders: Orders) -> int:

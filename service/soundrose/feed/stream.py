@@ -1,13 +1,13 @@
 """codec: hops from ingest to bands, and what bands answer (inside the service; not part of the contract).
 
 ROUTER (ingest, bound) and DEALER (band). A band says, at once when it is done with a hop and else every quarter second,
-`[msgpack [band, session, ingest, taken]]`: `session` names one connection of its process, `ingest` the ingest process it
-believes it talks to ("" at first). Ingest answers one that names another with `[b"welcome", msgpack [ingest, clock]]`,
-from which `taken` counts anew; `clock` names the monotonic clock that `received_ns` was read from. A hop is `[b"hop",
-msgpack head, samples, times, bad, clipped]`, arrays little-endian, C order; the head names the session it is for.
+`[msgpack [band, session, ingest, taken]]`: `session` names one connection of its process, `ingest` the ingest process
+it believes it talks to ("" at first). Ingest answers one that names another with `[b"welcome", msgpack [ingest,
+clock]]`, from which `taken` counts anew; `clock` names the monotonic clock that `received_ns` was read from. A hop is
+`[b"hop", msgpack head, samples, times, bad, clipped]`, arrays little-endian, C order; the head names its session.
 
-Hops on their way are lost with a connection, and ingest cannot see it: the band's count would stand still for ever. So a
-band whose connection ends takes a new session, with which it joins anew, and leaves hops of the old one alone.
+Hops on their way are lost with a connection, and ingest cannot see it: the band's count would stand still for ever. So
+a band whose connection ends takes a new session, with which it joins anew, and leaves hops of the old one alone.
 """
 
 from collections.abc import Sequence
