@@ -28,10 +28,11 @@ class Array(ArrayModel):
     rate_hz: float = 8000.0
 
     def toml(self, **keys: Any) -> dict[str, Any]:
-        """Settings of a service with live overload: like at sea, it is the feed that sets the pace."""
+        """Settings of a service with live overload: like at sea, the feed sets the pace. None leaves a table out."""
         main = self.band(band_hz=[50.0, 3000.0], frame=2048, beams=145, average_s=1.0)
         low = self.band(name="low", band_hz=[50.0, 900.0], frame=4096, beams=73, channels="0:48:2", average_s=2.0)
-        return self.settings(main, low, overload="drop") | keys
+        merged = self.settings(main, low, overload="drop") | keys
+        return {name: part for name, part in merged.items() if part is not None}
 
 
 @dataclass

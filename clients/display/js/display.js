@@ -199,7 +199,7 @@ export class Display {
   }
 
   linkChanged() {
-    showState(this);
+    this.showDigits();
   }
 
   async fetchRecord() {

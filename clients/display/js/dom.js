@@ -93,7 +93,7 @@ export class Page {
       button.type = "button";
       button.id = `do-${action.id}`;
       button.title = `${action.text} (${action.shown})`;
-      button.append(this.document.createElement("span"), this.document.createElement("kbd"));
+      button.append(this.document.createElement("span"), " ", this.document.createElement("kbd"));
       /** @type {HTMLElement} */ (button.lastElementChild).textContent = action.shown;
       button.addEventListener("click", (event) => run(action, event.shiftKey));
       this.element(action.id.startsWith("limit") ? "limits" : "controls").append(button);

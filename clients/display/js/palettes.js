@@ -36,8 +36,8 @@ const PALETTES = {
     light: 0.6,
   },
   night: {
-    page: "#000000", plate: "#06080a", text: "#959a9c", faint: "#3a4146", accent: "#7a9cb8", beam: "#9fb3c2",
-    mean: "#94809c", cautionPlate: "#7d6e00", cautionText: "#000000", wrongPlate: "#5c0a12", wrongText: "#c9a9ac",
+    page: "#000000", plate: "#06080a", text: "#959a9c", faint: "#3a4146", accent: "#7a9cb8", beam: "#93a5b3",
+    mean: "#94809c", cautionPlate: "#1f1b00", cautionText: "#b8a500", wrongPlate: "#5c0a12", wrongText: "#c9a9ac",
     light: 0.22,
   },
 };
