@@ -10,7 +10,7 @@ from soundrose.beam.stage import BandStage
 from soundrose.feed.hop import Hop
 from soundrose.feed.intake import snapshot_facts
 from soundrose.feed.wire import LAYOUTS, NUMBERS, REASONS, UNITS
-from soundrose.scene.scenario import settings_text
+from soundrose.scene.scene_file import shipped
 from soundrose.settings import load_settings
 from soundrose.status import BandBook, status_header
 
@@ -42,10 +42,8 @@ def test_every_key_of_status_is_on_the_page():
     assert not missing
 
 
-def test_every_key_of_a_map_is_on_the_page(tmp_path):
-    path = tmp_path / "a.toml"
-    path.write_text(settings_text("tcp://127.0.0.1:*", "tcp://127.0.0.1:*", 0, "store"))
-    settings = load_settings(path)
+def test_every_key_of_a_map_is_on_the_page():
+    settings = load_settings(shipped("demo-settings.toml"))
     band = settings.bands[0]
     channels = settings.array.channels
     samples = np.zeros((channels, band.frame), np.float32)

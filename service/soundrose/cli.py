@@ -106,16 +106,17 @@ def bench(
 
 
 @app.command(
-    help="Run the service on a simulated array and show what it hears. Needs no settings.",
-    epilog=_examples("soundrose demo", "soundrose demo --seconds 60 --port 8090"),
+    help="Run the service on a simulated sea, and print where its display is. Needs no settings and no network.",
+    epilog=_examples("soundrose demo", "soundrose demo --seconds 60 --port 8090", "soundrose demo --picture"),
 )
 def demo(
     seconds: Annotated[float | None, typer.Option("--seconds", help="End after this long.")] = None,
     port: Annotated[int, typer.Option("--port", help="HTTP port; 0 for any free one.")] = 8080,
+    picture: Annotated[bool, typer.Option("--picture", help="Draw the map in this terminal.")] = False,
 ) -> None:
     from soundrose.scene.demo import demo as run_demo
 
-    raise typer.Exit(run_demo(seconds, port))
+    raise typer.Exit(run_demo(seconds, port, picture))
 
 
 def _mount_feed() -> None:

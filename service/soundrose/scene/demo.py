@@ -1,4 +1,4 @@
-"""process: `soundrose demo`: the whole service, an invented array that sends to it, and its maps in this terminal."""
+"""process: `soundrose demo`: the whole service, a simulated sea that sends to it, and where to look."""
 
 import ctypes
 import json
@@ -14,16 +14,14 @@ from contextlib import contextmanager
 from pathlib import Path
 from typing import IO, Any
 
-import soundfile
 from rich.console import Console, Group
 from rich.live import Live
 from rich.text import Text
 
 from soundrose.errors import StartError
-from soundrose.scene import scenario
 from soundrose.scene.picture import map_picture
-from soundrose.scene.plane import PlaneWaves, to_counts
-from soundrose.scene.tally import Tally
+from soundrose.scene.scene_file import shipped
+from soundrose.scene.sighting import Sighting, sighting
 from soundrose_client import MapMessage, Message, ReceiveTimeout, Subscriber
 
 __all__ = ["demo"]
@@ -31,22 +29,27 @@ __all__ = ["demo"]
 READY_S = 60.0  # a cold start on a small machine takes some seconds
 END_S = 6.0
 DRAW_S = 0.25
+BAND = "low"  # the one whose map is shown here
+SETTINGS, TRUTH = "skarvholm.toml", "truth.jsonl"
 PR_SET_PDEATHSIG = 1
 
 
-def demo(seconds: float | None = None, port: int = 8080, console: Console | None = None) -> int:
+def demo(seconds: float | None = None, port: int = 8080, picture: bool = False, console: Console | None = None) -> int:
     """Runs until `seconds` are over, Ctrl-C or SIGTERM; prints what was seen. Exit status 0, 1 if no map came.
 
-    port : of HTTP; 0 takes any free port for everything. StartError: the service did not start.
+    port : of HTTP; 0 takes any free port for everything.  picture : the map in this terminal, not only a line.
+    StartError: the service did not start.
     """
     console = console or _console()
     signal.signal(signal.SIGTERM, signal.default_int_handler)
     with tempfile.TemporaryDirectory(prefix="soundrose-demo-") as folder:
         place = Path(folder)
-        console.print("Survey vessel Skarvholm, array aft, 48 hydrophones: an invented scenario.", highlight=False)
         try:
-            with _service(place, port) as ready, _array(place, ready["feed"], console):
-                return _watch(ready, seconds, console)
+            with _service(place, port) as ready:
+                console.print(f"\n  {ready['http']}/\n", highlight=False)
+                console.print("Survey vessel Skarvholm, array aft, 48 hydrophones: an invented sea. Ctrl-C ends.")
+                with _array(place, ready["feed"], console):
+                    return _watch(ready, place / TRUTH, seconds, picture, console)
         except KeyboardInterrupt:  # before there was anything to watch
             return 0
 
@@ -61,22 +64,27 @@ def _console() -> Console:
 @contextmanager
 def _service(place: Path, port: int) -> Iterator[Mapping[str, str]]:
     """The service as a process of its own; its ready line."""
-    any_port = port == 0
-    text = scenario.settings_text(
-        "tcp://127.0.0.1:*" if any_port else "tcp://127.0.0.1:5510",
-        "tcp://127.0.0.1:*" if any_port else "tcp://127.0.0.1:5511",
-        port,
-        str(place / "store"),
-    )
-    (place / "skarvholm.toml").write_text(text, "utf-8")
+    (place / SETTINGS).write_text(_settings_text(port, place / "store"), "utf-8")
     with (place / "service.log").open("wb") as log:
-        process = _start(["run", "--config", str(place / "skarvholm.toml")], stdout=subprocess.PIPE, stderr=log)
+        process = _start(["run", "--config", str(place / SETTINGS)], stdout=subprocess.PIPE, stderr=log)
         try:
             yield _ready_line(process, place / "service.log")
         finally:
             _end(process, signal.SIGTERM)
             if process.stdout is not None:
                 process.stdout.close()
+
+
+def _settings_text(port: int, store: Path) -> str:
+    """The settings that come with the demo's scene, with these ports and this store."""
+    text = shipped("demo-settings.toml").read_text("utf-8")
+    changes = [("port = 8080", f"port = {port}"), ('path = "soundrose-data"', f"path = {json.dumps(str(store))}")]
+    if port == 0:
+        changes += [(f"127.0.0.1:{fixed}", "127.0.0.1:*") for fixed in (5510, 5511)]
+    for old, new in changes:
+        assert text.count(old) == 1, old
+        text = text.replace(old, new)
+    return text
 
 
 def _start(arguments: list[str], **streams: Any) -> "subprocess.Popen[bytes]":
@@ -119,12 +127,10 @@ def _line_within(stream: IO[bytes], limit_s: float) -> bytes:
 
 @contextmanager
 def _array(place: Path, feed: str, console: Console) -> Iterator[None]:
-    """The array: its recording, played round and round by a process of its own."""
-    recording = place / "skarvholm.wav"
-    _record(recording)
-    arguments = ["feed", "file", str(recording), "--config", str(place / "skarvholm.toml"), "--to", feed]
+    """The array: the scene, made as it goes by a process of its own, which also writes down what is truly there."""
+    arguments = ["feed", "scene", "demo.toml", "--config", str(place / SETTINGS), "--to", feed]
     with (place / "feed.log").open("wb") as log:
-        process = _start([*arguments, "--repeat", "0"], stdout=log, stderr=log)
+        process = _start([*arguments, "--truth", str(place / TRUTH)], stdout=log, stderr=log)
         try:
             yield
         finally:
@@ -132,24 +138,6 @@ def _array(place: Path, feed: str, console: Console) -> Iterator[None]:
             _end(process, signal.SIGINT)
     if gone is not None:
         console.print((place / "feed.log").read_text("utf-8", "replace").strip(), markup=False)
-
-
-def _record(path: Path) -> None:
-    """One period of the scenario's sounds as the array's converters give them."""
-    waves = PlaneWaves(
-        scenario.positions(),
-        scenario.RATE_HZ,
-        scenario.SOUND_SPEED_M_S,
-        [sound.wave for sound in scenario.SOUNDS],
-        sensor_db=scenario.SENSOR_DB,
-        seed=1,
-        period=scenario.PERIOD,
-    )
-    rate = int(scenario.RATE_HZ)
-    with soundfile.SoundFile(path, "w", rate, scenario.CHANNELS, subtype=f"PCM_{scenario.BITS}") as file:
-        for pressure in waves.blocks(scenario.PERIOD, rate):
-            counts = to_counts(pressure, **scenario.CALIBRATION, bits=scenario.BITS)
-            file.write(counts.T << (32 - scenario.BITS))
 
 
 def _end(process: "subprocess.Popen[bytes]", number: int) -> None:
@@ -162,26 +150,32 @@ def _end(process: "subprocess.Popen[bytes]", number: int) -> None:
         process.wait()
 
 
-def _watch(ready: Mapping[str, str], seconds: float | None, console: Console) -> int:
+def _watch(ready: Mapping[str, str], truth: Path, seconds: float | None, picture: bool, console: Console) -> int:
     """Shows what comes until the time is over; prints what was seen."""
     until = time.monotonic() + seconds if seconds is not None else float("inf")
-    view = _View(ready, console)
-    with Subscriber(ready["publish"], ["map/main", "status"]) as subscriber:
+    view = _View(ready, picture, console)
+    with Subscriber(ready["publish"], [f"map/{BAND}", "status"]) as subscriber:
         try:
             view.follow(subscriber, until)
         except KeyboardInterrupt:
             pass
-        _print_summary(view, subscriber, console)
-    return 0 if view.tally.maps else 1
+        _print_summary(view, _newest_truth(truth), subscriber, console)
+    return 0 if view.maps else 1
+
+
+def _newest_truth(path: Path) -> Mapping[str, Any] | None:
+    """The last whole line; None before there is one."""
+    lines = path.read_text("utf-8").split("\n")[:-1] if path.exists() else []
+    return json.loads(lines[-1]) if lines else None
 
 
 class _View:
-    """The newest map and status, and how they are shown: a picture in a terminal, a line a second elsewhere."""
+    """The newest map and status, and how they are shown: one line or a picture in a terminal, a line a second elsewhere."""
 
-    def __init__(self, ready: Mapping[str, str], console: Console) -> None:
-        self.tally = Tally()
-        self._ready, self._console = ready, console
-        self._map: MapMessage | None = None
+    def __init__(self, ready: Mapping[str, str], picture: bool, console: Console) -> None:
+        self.maps = 0
+        self.newest: MapMessage | None = None
+        self._ready, self._picture_wanted, self._console = ready, picture, console
         self._status: Message | None = None
         self._due = 0.0
 
@@ -197,49 +191,50 @@ class _View:
 
     def _take(self, message: Message) -> None:
         if isinstance(message, MapMessage):
-            self._map = message
-            self.tally.add(message.level_db, message.cone_deg, message.frequency_hz)
+            self.newest = message
+            self.maps += 1
         else:
             self._status = message
 
     def _draw(self, live: Live) -> None:
-        self._due = time.monotonic() + (DRAW_S if self._console.is_terminal else 1.0)
+        often = self._console.is_terminal and self._picture_wanted
+        self._due = time.monotonic() + (DRAW_S if often else 1.0)
         if self._console.is_terminal:
-            live.update(self._picture(), refresh=True)
-        elif self._map is not None:
+            live.update(self._picture() if self._picture_wanted else Text(self._line(), no_wrap=True), refresh=True)
+        elif self.newest is not None:
             self._console.print(self._line(), highlight=False, soft_wrap=True)
 
     def _picture(self) -> Group:
-        if self._map is None:
-            return Group(Text("waiting for the first map ..."))
-        m = self._map
+        m = self.newest
+        if m is None:
+            return Group(Text(self._line()))
         width, height = min(self._console.width, 110), max(6, min(self._console.height - 6, 30))
         picture = map_picture(
             m.level_db, m.cone_deg.tolist(), m.f0_hz, m.df_hz, width=max(30, width), height=height
         )  # fmt: skip
-        return Group(picture, Text(self._line(), no_wrap=True), Text(f"{self._ready['http']}   Ctrl-C ends"))
+        return Group(picture, Text(self._line(), no_wrap=True), Text(f"{self._ready['http']}/   Ctrl-C ends"))
 
     def _line(self) -> str:
-        assert self._map is not None
-        loudest, latency = self._map.loudest(), self._map.latency_ms
+        if self.newest is None:
+            return "waiting for the first map ..."
+        loudest, latency = self.newest.loudest(), self.newest.latency_ms
         state = "?" if self._status is None else self._status.header.get("state", "?")
         delay = "?" if latency is None else f"{latency:.0f} ms"
         return (
-            f"{self._map.time[11:19]}  loudest {loudest.cone_deg:5.1f}° at {loudest.level_db:5.1f} dB re 1 µPa   "
+            f"{self.newest.time[11:19]}  loudest {loudest.cone_deg:5.1f}° at {loudest.level_db:5.1f} dB re 1 µPa   "
             f"latency {delay}   feed {state}"
         )
 
 
-def _print_summary(view: _View, subscriber: Subscriber, console: Console) -> None:
+def _print_summary(view: _View, truth: Mapping[str, Any] | None, subscriber: Subscriber, console: Console) -> None:
     counters = subscriber.counters
     console.print(
-        f"\n{view.tally.maps} maps; missed {counters.missed}, new starts {counters.restarts}, "
+        f"\n{view.maps} maps; missed {counters.missed}, new starts {counters.restarts}, "
         f"unreadable {sum(counters.malformed.values())}",
         highlight=False,
     )
-    for finding in view.tally.findings(scenario.SOUNDS):
-        console.print(
-            f"  {finding.name:20} true {finding.true_deg:5.1f}°   loudest beam {finding.found_deg:5.1f}°",
-            highlight=False,
-        )
+    if view.newest is not None and truth is not None:
+        m = view.newest
+        seen: Sighting = sighting(m.level_db, m.cone_deg, truth)
+        console.print(f"  {seen.text}", highlight=False, soft_wrap=True)
     console.print("Not a navigation or collision-avoidance aid; a line array cannot tell port from starboard.")

@@ -63,7 +63,8 @@ class Faults:
     def _out(self, seed: tuple[int, ...], share: float, first: int, length: int) -> NDArray[np.bool_]:
         spell = (first + np.arange(length)) // self._spell
         out = [np.random.default_rng([*seed, k]).uniform() < share for k in range(int(spell[0]), int(spell[-1]) + 1)]
-        return np.array(out, np.bool_)[spell - spell[0]]
+        chosen: NDArray[np.bool_] = np.array(out, np.bool_)[spell - spell[0]]
+        return chosen
 
 
 class Converter:
