@@ -249,7 +249,7 @@ def test_snapshot_of_a_large_array_leaves_out_notes_that_do_not_fit(source_for):
 @pytest.mark.parametrize("snapshot", [b"\xc1", b"\x01\x02", b"\x80\x80", "cut", "newer"])
 def test_what_is_no_snapshot_is_refused(source_for, settings_for, snapshot):
     good = source_for().intake.snapshot()
-    bad = {"cut": good[:-1], "newer": good[:3] + b"\x02" + good[4:]}.get(snapshot, snapshot)
+    bad = {"cut": good[:-1], "newer": good[:3] + b"\x7f" + good[4:]}.get(snapshot, snapshot)
     with pytest.raises(UsageError, match="snapshot"):
         Intake(settings_for(), bad)
     with pytest.raises(UsageError, match="snapshot"):

@@ -5,29 +5,28 @@ which a part would not hold enough samples to tell). Time is that of the
 samples, never the host's, so that a recording played fast is judged as it was live. Over a gap or a new run the second
 goes on; where more than it has passed, it is judged by what it has, and the next begins with the sample that came.
 
-States, the first that applies (`not judged` until the first second is over, and where a second has next to nothing):
-
-    excluded      left out by the settings
-    dead          no variation in the whole second, or no finite sample; and on from there until a clean second
-    clipped       more than CLIPPED_SHARE of the samples at full scale
-    intermittent  NaN or infinity, or no variation in some part of the second
-    good          none of these
+What is found in a second comes from all its samples (variation, NaN, full scale, level) and from one short spectrum in
+each part (`spectra`), compared with neighbours (`levels`, `phase`); what is said of it stands in `judge`.
 """
 
-from collections.abc import Sequence
 from math import ceil
 from typing import Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
 
+from soundrose.feed.judge import CLIPPED_SHARE, STATES, Judge, Second
+from soundrose.feed.levels import Levels
+from soundrose.feed.neighbours import close_pairs, even_stretches
+from soundrose.feed.phase import Places, Polarity
+from soundrose.feed.spectra import SecondOfSpectra
 from soundrose.product.messages import LEVEL_FLOOR_DB, HealthProduct
+from soundrose.settings_types import Settings
 
 __all__ = ["CLIPPED_SHARE", "FLAT_SAMPLES", "PARTS", "SECOND_NS", "Health"]
 
 SECOND_NS: Final = 1_000_000_000
 PARTS: Final = 10  #: of a second, at most; a hydrophone without variation in one of them is intermittent
-CLIPPED_SHARE: Final = 0.001  #: of the samples of a second: more than single clicks reach
 FLAT_SAMPLES: Final = 8  #: fewer equal values in a row are no sign of a dead hydrophone
 _NEARLY: Final = 0.01  #: samples; a block's t is rounded to whole nanoseconds, and must not move a boundary by one
 
@@ -38,17 +37,18 @@ class Health:
     Call `move` when the time of the next sample is not that after the last, `room` to learn how long the next piece
     may be, `add` with the piece, `close` once the room is used up.
 
-    out : (channels,) bool, hydrophones out of use: excluded, or dead at the last judgement.
+    settings : hydrophones, their places, those left out, rate, sound speed.
+    out : (channels,) bool, hydrophones out of use since the last judgement.
     """
 
-    def __init__(self, channels: int, exclude: Sequence[int], rate_hz: float) -> None:
+    def __init__(self, settings: Settings) -> None:
+        array, rate_hz = settings.array, settings.feed.rate_hz
+        channels = array.channels
         self._rate_hz = rate_hz
         self._parts = max(min(int(rate_hz / FLAT_SAMPLES), PARTS), 1)
         self._enough = max(rate_hz / self._parts, 1.0)  # samples that a second needs to be judged
         self._excluded = np.zeros(channels, bool)
-        self._excluded[list(exclude)] = True
-        self._dead = np.zeros(channels, bool)
-        self.out = self._excluded.copy()
+        self._excluded[list(array.exclude)] = True
         self._start: int | None = None  # of the second, ns
         self._part_i = 0
         self.edge = 0  #: end of the current part, ns
@@ -58,16 +58,30 @@ class Health:
         self._flat_parts = np.zeros(channels, np.int64)
         self._second, self._part = _Range(channels), _Range(channels)
         self._samples = 0
+        self._set_up_comparison(settings)
+        self._judge_of = Judge(self._excluded, self._spectra.edges_hz)
+        self.out = self._judge_of.out
+
+    def _set_up_comparison(self, settings: Settings) -> None:
+        positions = np.asarray(settings.array.positions_m, np.float64)
+        speed, channels = settings.water.sound_speed_m_s, len(positions)
+        pairs = close_pairs(positions, settings.calibration.delay_s, speed)
+        # twice the limit of the closest pairs: the frequency at which neighbours are half a wave apart
+        highest_hz = 2 * float(pairs.limit_hz.max(initial=0.0))
+        self._spectra = SecondOfSpectra(channels, self._parts, self._rate_hz, min(highest_hz, self._rate_hz))
+        self._levels = Levels(positions, self._spectra.bands)
+        self._polarity = Polarity(channels, pairs, self._spectra.phase_hz)
+        self._places = Places(channels, even_stretches(positions), len(self._spectra.phase_hz))
 
     @property
-    def dead(self) -> NDArray[np.bool_]:
-        """(channels,) bool, dead at the last judgement."""
-        return self._dead.copy()
+    def codes(self) -> NDArray[np.uint8]:
+        """(channels,) uint8, states at the last judgement, as indices of `judge.STATES`."""
+        return self._judge_of.codes
 
-    def resume(self, dead: NDArray[np.bool_]) -> None:
-        """Go on with what was judged dead before a restart."""
-        self._dead = dead.copy()
-        self.out = self._excluded | dead
+    def resume(self, codes: NDArray[np.uint8]) -> None:
+        """Go on with the states judged before a restart."""
+        self._judge_of.resume(codes)
+        self.out = self._judge_of.out
 
     def is_apart(self, t_ns: int) -> bool:
         """Whether a sample at `t_ns` lies outside the current part, so that `move` must be called."""
@@ -105,6 +119,7 @@ class Health:
         self._clipped += clipped
         self._finite += samples.shape[1] if bad is None else np.where(bad, 0, samples.shape[1])
         self._part.add(samples, bad)
+        self._spectra.add(samples, bad)
 
     def close(self) -> HealthProduct | None:
         """End the current part; the judgement of the second, if this was its last part."""
@@ -127,6 +142,7 @@ class Health:
         self._flat_parts += self._part.is_flat()
         self._second.join(self._part)
         self._part.clear()
+        self._spectra.close_part()
 
     def _judge(self) -> HealthProduct | None:
         self._close_part()
@@ -135,48 +151,43 @@ class Health:
             product = self._product()
         self._power[:], self._finite[:], self._clipped[:], self._flat_parts[:] = 0.0, 0, 0, 0
         self._second.clear()
+        self._spectra.clear()
         self._samples = 0
         return product
 
     def _product(self) -> HealthProduct:
-        flat = (self._second.is_flat() | (self._finite == 0)) & ~self._excluded
-        torn = (self._finite < self._samples) | (self._flat_parts > 0)
-        self._dead = flat | (self._dead & torn)
-        self.out = self._excluded | self._dead
-        channels = [self._channel(i) for i in range(len(self.out))]
+        second = self._found()
+        self._judge_of.push(second)
+        self.out = self._judge_of.out
+        channels = [self._channel(i, second) for i in range(len(self.out))]
         header = {"t": self.last_t_ns, "used": int(np.count_nonzero(~self.out)), "channels": channels}
         return HealthProduct(header)
 
-    def _channel(self, i: int) -> dict[str, Any]:
-        finite = int(self._finite[i])
+    def _found(self) -> Second:
+        flat = self._second.is_flat()
+        fit = ~self._excluded & ~flat & (self._finite == self._samples)
+        spectra = self._spectra
+        phases = spectra.phases[: spectra.filled]
+        compared = phases.size > 0
+        return Second(
+            samples=self._samples,
+            parts=self._parts,
+            finite=self._finite,
+            clipped=self._clipped,
+            flat=flat,
+            flat_parts=self._flat_parts,
+            low=self._second.low,
+            excess=self._levels.push(spectra, fit),
+            polarity=self._polarity.push(phases, fit) if compared else None,
+            swaps=self._places.push(phases, fit) if compared else None,
+        )
+
+    def _channel(self, i: int, second: Second) -> dict[str, Any]:
+        finite = int(second.finite[i])
         mean = float(self._power[i]) / finite if finite else 0.0
         level_db = max(10.0 * float(np.log10(mean)), LEVEL_FLOOR_DB) if mean > 0 else LEVEL_FLOOR_DB
-        state, why = self._state(i, finite)
-        return {"i": i, "state": state, "level_db": round(level_db, 3), "why": why}
-
-    def _state(self, i: int, finite: int) -> tuple[str, str]:
-        share = float(self._clipped[i]) / self._samples
-        if self._excluded[i]:
-            return "excluded", "left out by the settings (array.exclude)"
-        if self._dead[i]:
-            if not finite:
-                return "dead", "no finite sample in the second"
-            if self._second.is_flat()[i]:
-                return "dead", f"no variation: every sample reads {self._second.low[i]:.6g} µPa"
-            return "dead", f"was dead, and is back after one clean second; {self._torn(i, finite)}"
-        if share > CLIPPED_SHARE:
-            return (
-                "clipped",
-                f"{100 * share:.3g} % of the samples at full scale; up to {100 * CLIPPED_SHARE:g} % is good",
-            )
-        if finite < self._samples or self._flat_parts[i]:
-            return "intermittent", self._torn(i, finite)
-        return "good", ""
-
-    def _torn(self, i: int, finite: int) -> str:
-        if finite < self._samples:
-            return f"NaN or infinity in {100 * (1 - finite / self._samples):.3g} % of the second"
-        return f"no variation in {self._flat_parts[i]} of {self._parts} parts of the second"
+        state = STATES[self._judge_of.codes[i]]
+        return {"i": i, "state": state, "level_db": round(level_db, 3), "why": self._judge_of.why(i, second)}
 
 
 class _Range:

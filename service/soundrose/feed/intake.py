@@ -51,14 +51,14 @@ class Intake:
         frames = [band.frame for band in settings.bands]
         self._expected = Expected.of(settings)
         self._calibration = Calibration(settings.calibration)
-        self._health = Health(array.channels, array.exclude, rate)
+        self._health = Health(settings)
         self._starts = [FrameStarts(frame, rate) for frame in sorted(set(frames))]
         self.hop_length = hop_length(frames)
         self._hops = HopAssembler(array.channels, self.hop_length, rate, self._calibration, self._health)
         self.counters, self._state, self._notes = Counters(), RunState(), NotesInForce()
         if snapshot:
-            self._state, self.counters, dead, notes = unpack_snapshot(snapshot, array.channels)
-            self._health.resume(dead)
+            self._state, self.counters, states, notes = unpack_snapshot(snapshot, array.channels)
+            self._health.resume(states)
             self._notes = NotesInForce(notes)
             self._give_up_hop(frames)
         self._runs = Runs(rate, frames, self.counters, self._state)
@@ -181,4 +181,4 @@ class Intake:
         return pack_count(self._state, self.counters) + self._rest
 
     def _packed_rest(self) -> bytes:
-        return pack_rest(self._health.dead, self._notes.listed())
+        return pack_rest(self._health.codes, self._notes.listed())

@@ -1,4 +1,4 @@
-"""codec: what a restarted ingest goes on from, as few bytes: run, index, counters, the dead, the notes in force.
+"""codec: what a restarted ingest goes on from, as few bytes: run, index, counters, states, the notes in force.
 
 Two msgpack values one after the other: the count, which changes with every message, and the rest, which seldom does
 and is therefore kept packed. Written and read by this program alone, under a version of its own.
@@ -21,7 +21,7 @@ __all__ = ["SNAPSHOT_LIMIT", "pack_count", "pack_rest", "snapshot_facts", "unpac
 
 SNAPSHOT_LIMIT: Final = 60 * 1024  #: bytes; a snapshot is never larger
 _REST_LIMIT: Final = 44 * 1024  #: bytes of the rest; beyond it the notes are left out, and come again from the source
-_VERSION: Final = 1
+_VERSION: Final = 2
 _COUNTED: Final = tuple(f.name for f in fields(Counters))
 
 
@@ -36,11 +36,11 @@ def pack_count(state: RunState, counters: Counters) -> bytes:
     )))  # fmt: skip
 
 
-def pack_rest(dead: NDArray[np.bool_], notes: Sequence[Note]) -> bytes:
-    """The part that seldom changes. dead : (channels,) bool."""
-    mask = np.packbits(dead).tobytes()
-    rest = bytes(msgpack.packb((mask, [plain for plain in map(_plain, notes) if plain])))
-    return rest if len(rest) <= _REST_LIMIT else bytes(msgpack.packb((mask, [])))
+def pack_rest(states: NDArray[np.uint8], notes: Sequence[Note]) -> bytes:
+    """The part that seldom changes. states : (channels,) uint8, of the hydrophones, one byte each."""
+    codes = states.tobytes()
+    rest = bytes(msgpack.packb((codes, [plain for plain in map(_plain, notes) if plain])))
+    return rest if len(rest) <= _REST_LIMIT else bytes(msgpack.packb((codes, [])))
 
 
 def _plain(note: Note) -> tuple[Any, ...]:
@@ -52,12 +52,12 @@ def _plain(note: Note) -> tuple[Any, ...]:
     return ()
 
 
-def unpack_snapshot(snapshot: bytes, channels: int) -> tuple[RunState, Counters, NDArray[np.bool_], list[Note]]:
-    """State, counters, the dead (channels,) and the notes in force. UsageError if it is not a snapshot."""
+def unpack_snapshot(snapshot: bytes, channels: int) -> tuple[RunState, Counters, NDArray[np.uint8], list[Note]]:
+    """State, counters, hydrophones' states (channels,) and the notes in force. UsageError if it is no snapshot."""
     try:
         unpacker = msgpack.Unpacker(use_list=False)
         unpacker.feed(snapshot)
-        count, (mask, notes) = unpacker.unpack(), unpacker.unpack()
+        count, (codes, notes) = unpacker.unpack(), unpacker.unpack()
         version, running, run, epoch, following, first, t_ns, stretch, ended, replaced, candidate, *counts = count
         if version != _VERSION:
             raise UsageError(f"the snapshot has version {version!r}; this program reads {_VERSION}")
@@ -67,8 +67,8 @@ def unpack_snapshot(snapshot: bytes, channels: int) -> tuple[RunState, Counters,
         )  # fmt: skip
         counters = Counters(**dict(zip(_COUNTED, counts, strict=True)))
         counters.dropped = dict(zip(REASONS, counts[-1], strict=True))
-        dead = np.unpackbits(np.frombuffer(mask, np.uint8), count=channels).astype(bool)
-        return state, counters, dead, [_note(note) for note in notes]
+        states = np.frombuffer(codes, np.uint8, count=channels)
+        return state, counters, states, [_note(note) for note in notes]
     except (ValueError, TypeError, LookupError, msgpack.UnpackException) as error:
         if isinstance(error, UsageError):
             raise
