@@ -103,11 +103,13 @@ class Screen:
         plot = self.plot(canvas)
         self.page.mouse.move(plot.x(value), plot.y(cone_deg))
 
-    def colours(self, element: str) -> tuple[np.ndarray, np.ndarray]:
-        """(text, ground) of an element as they are on the screen: the two ends of its pixels' lightness."""
-        box = self.page.locator(f"#{element}").bounding_box()
+    def colours(self, element: str, picture: np.ndarray | None = None) -> tuple[np.ndarray, np.ndarray]:
+        """(text, ground) of an element (id, and what follows of a selector) as they are on the screen: its most common
+        colour, and the one that differs most from it."""
+        box = self.page.locator(f"#{element}").first.bounding_box()
         assert box is not None
-        part = self.pixels()[
+        picture = self.pixels() if picture is None else picture
+        part = picture[
             round(box["y"]) : round(box["y"] + box["height"]), round(box["x"]) : round(box["x"] + box["width"])
         ].reshape(-1, 3)
         ground = np.median(part, axis=0)

@@ -7,7 +7,35 @@ from rig import Service
 from screen import Screen
 from sea import Sea
 
-KEYS = ["1", "2", "+", "-", "0", ",", ".", "↑", "↓", "←", "→", "M", "N", "H", "T", "R", "A", "J", "K", "U", "I", "P", "D", "C", "V", "F2", "?"]
+KEYS = [
+    "1",
+    "2",
+    "+",
+    "-",
+    "0",
+    ",",
+    ".",
+    "↑",
+    "↓",
+    "←",
+    "→",
+    "M",
+    "N",
+    "H",
+    "T",
+    "R",
+    "A",
+    "J",
+    "K",
+    "U",
+    "I",
+    "P",
+    "D",
+    "C",
+    "V",
+    "F2",
+    "?",
+]
 
 
 def pressed(screen: Screen, element: str) -> bool:

@@ -108,9 +108,8 @@ def add_history(app: FastAPI, source: Source, workshop: Workshop) -> History:
         operation_id="get_history",
         summary="Levels over bearing of the last hour, two rows a second",
         response_class=Response,
-        responses={200: {**with_example(HISTORY_EXAMPLE, "Rows, oldest first"), "model": HistoryAnswer},
-                   **problems(404, 422)},
-    )  # fmt: skip
+        responses={200: _documented(), **problems(404, 422)},
+    )
     async def get_history(
         band: Annotated[str | None, Query(description="name of a band; the first configured by default")] = None,
         since: Annotated[str | None, Query(pattern=_CURSOR, description="a `next` of an earlier answer")] = None,
@@ -143,6 +142,12 @@ def add_history(app: FastAPI, source: Source, workshop: Workshop) -> History:
         return Response(_with_age(answer.body, format, age_s), media_type=answer.media_type)
 
     return history
+
+
+def _documented() -> dict[str, Any]:
+    found: dict[str, Any] = {**with_example(HISTORY_EXAMPLE, "Rows, oldest first"), "model": HistoryAnswer}
+    packed = {"schema": {"type": "string", "format": "binary"}}
+    return {**found, "content": {**found["content"], "application/msgpack": packed}}
 
 
 def _head(source: Source, history: History, ring: BandRing, band: str, part: int | None, rows: Rows) -> dict[str, Any]:
