@@ -143,7 +143,9 @@ def main() -> int:
 
 
 def report(result: subprocess.CompletedProcess[str], seen: Counter, sizes: list, restarts: dict) -> int:
-    print("\n".join(result.stdout.splitlines()[-25:]))
+    lines = result.stdout.splitlines()
+    failures = next((number for number, line in enumerate(lines) if " FAILURES " in line), len(lines) - 25)
+    print("\n".join(lines[max(0, failures) :]))
     print("live sockets:", dict(seen))
     print("restarts:", restarts)
     third = max(1, len(sizes) // 3)

@@ -38,6 +38,7 @@ def one(name: str, file: str, old: str, new: str, *tests: str) -> Mutant:
 
 WAVES, RULES, HOSTILE = "test_plane_waves.py", "test_feed_rules.py", "test_hostile_feed.py"
 NOTES, HOLD, LOAD = "test_notes.py", "test_hold.py", "test_overload.py"
+SERVED, FAULTS = "test_served_maps.py", "test_faults.py"
 
 MUTANTS = (
     one("mirrored cone", "beam/steering.py", "tau = np.multiply.outer(self.cos[beams],",
@@ -99,6 +100,15 @@ MUTANTS = (
     one("field line heard from the other end", "array/geometry.py",
         "positions = (listed - listed.mean(axis=0))[list(channels)]",
         "positions = -(listed - listed.mean(axis=0))[list(channels)]", "test_field_records.py", "-k", "sign"),
+    one("decibels averaged on the way out", "product/reduce.py", "power = np.exp(level_db[:, chosen] * _NEPER_PER_DB)",
+        "power = np.exp(np.mean(level_db[:, chosen], axis=1, keepdims=True) * _NEPER_PER_DB + 0 * level_db[:, chosen])",
+        SERVED),
+    one("bytes cut, not rounded", "serve/live_frames.py", "steps = np.rint(", "steps = np.floor(", SERVED),
+    one("stuck process left alone", "children.py", "STUCK_S = 2.0", "STUCK_S = 1e9", FAULTS),
+    one("restart of a band not flagged", "beam/frames.py", "if (missed or resumed) and not new_run:",
+        "if False and not new_run:", FAULTS),
+    one("count not kept over a restart of ingest", "feed/process.py",
+        "Intake(settings, self._record.read() or None)", "Intake(settings, None)", FAULTS),
 )  # fmt: skip
 
 
