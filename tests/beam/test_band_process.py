@@ -1,6 +1,7 @@
 """The sockets of a band: what it says to ingest, and that a connection that breaks never starves it."""
 
 import threading
+import time
 import uuid
 
 import numpy as np
@@ -37,7 +38,12 @@ class Ingest:
     def open(self) -> None:
         self.socket = self.context.socket(zmq.ROUTER)
         self.socket.setsockopt(zmq.LINGER, 0)
-        self.socket.bind(self.endpoint)
+        for _ in range(500):  # the socket before may not be gone yet
+            try:
+                return self.socket.bind(self.endpoint)
+            except zmq.ZMQError:
+                time.sleep(0.01)
+        raise AssertionError(f"cannot bind {self.endpoint}")
 
     def report(self, wanted=lambda report: True) -> Report:
         """The next report that is as wanted."""

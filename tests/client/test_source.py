@@ -1,5 +1,7 @@
 """A source over a real PULL socket, its bytes read with stock msgpack."""
 
+import time
+
 import msgpack
 import numpy as np
 import pytest
@@ -212,3 +214,23 @@ def test_integers_that_do_not_fit_are_refused_not_wrapped(kind, bits):
     for value in (-limit - 1, limit):
         with pytest.raises(UsageError, match=str(value)):
             encode_samples(np.array([[0, value]]), kind)
+
+
+def test_source_that_is_made_to_wait_is_not_cut_off(pull, monkeypatch):
+    """The service answers no heartbeat while it does not read; cutting the connection would lose what is in flight."""
+    monkeypatch.setattr("soundrose_client.sockets.HEARTBEAT_MS", 100)
+    monkeypatch.setattr("soundrose_client.sockets.SILENCE_MS", 300)
+    pull.setsockopt(zmq.RCVHWM, 2)
+    pull.bind("tcp://127.0.0.1:*")
+    block = np.zeros((2, 250_000), dtype=np.int16)
+    until = time.monotonic() + 3.0
+    with Source("aft", 250_000.0, address_of(pull), queue_bytes=1 << 21, timeout_s=0.2) as source:
+        sent = []
+        while time.monotonic() < until:
+            first = source.next_index
+            try:
+                source.send(block, t_ns=first * 4000)
+                sent.append(first)
+            except SendTimeout:
+                pass
+        assert [receive(pull)[0]["first"] for _ in sent] == sent

@@ -65,7 +65,7 @@ def rig_for(settings_for):
     rigs = []
 
     def make(overload: str) -> Rig:
-        rigs.append(Rig(settings_for(rate_hz=RATE), overload))
+        rigs.append(Rig(settings_for(rate_hz=RATE, frames=(8192,)), overload))
         return rigs[-1]
 
     yield make

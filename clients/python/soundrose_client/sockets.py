@@ -7,7 +7,7 @@ import zmq
 
 from soundrose_client.errors import UsageError
 
-__all__ = ["Configure", "connect", "high_water", "prepare", "topic_list"]
+__all__ = ["Configure", "connect", "high_water", "prepare", "prepare_patient", "topic_list"]
 
 #: gets the socket just before it connects: keys (CURVE), a user name or token, a proxy ...
 Configure = Callable[[zmq.Socket[Any]], None]
@@ -33,6 +33,20 @@ def topic_list(topics: str | Iterable[str]) -> tuple[bytes, ...]:
         return tuple(topic.encode("ascii") for topic in listed)
     except UnicodeEncodeError:
         raise UsageError(f"topics are ASCII; got {listed!r}") from None
+
+
+def prepare_patient(socket: zmq.Socket[Any], linger_ms: int, message_limit: int) -> None:
+    """As `prepare`, for a socket whose peer may make it wait: the kernel asks whether it is there, not ZeroMQ.
+
+    A peer that does not read answers no heartbeat; the connection would be cut, and what is in flight lost.
+    """
+    prepare(socket, linger_ms, message_limit)
+    for option in (zmq.HEARTBEAT_IVL, zmq.HEARTBEAT_TIMEOUT, zmq.HEARTBEAT_TTL):
+        socket.setsockopt(option, 0)
+    socket.setsockopt(zmq.TCP_KEEPALIVE, 1)
+    socket.setsockopt(zmq.TCP_KEEPALIVE_IDLE, 5)
+    socket.setsockopt(zmq.TCP_KEEPALIVE_INTVL, 5)
+    socket.setsockopt(zmq.TCP_KEEPALIVE_CNT, 3)
 
 
 def prepare(socket: zmq.Socket[Any], linger_ms: int, message_limit: int) -> None:

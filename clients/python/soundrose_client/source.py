@@ -11,7 +11,7 @@ from numpy.typing import ArrayLike
 
 from soundrose_client.blocks import Unit, encode_note, encode_samples, sample_type
 from soundrose_client.errors import SendTimeout, UsageError
-from soundrose_client.sockets import Configure, connect, high_water, prepare
+from soundrose_client.sockets import Configure, connect, high_water, prepare_patient
 
 __all__ = ["Source"]
 
@@ -81,7 +81,7 @@ class Source:
 
     def _connect(self, depth: int, linger_ms: int, configure: Configure | None) -> zmq.Socket[bytes]:
         socket: zmq.Socket[bytes] = self._context.socket(zmq.PUSH)
-        prepare(socket, linger_ms, message_limit=1 << 20)
+        prepare_patient(socket, linger_ms, message_limit=1 << 20)
         socket.setsockopt(zmq.SNDHWM, depth)
         socket.setsockopt(zmq.IMMEDIATE, 1)  # nothing piles up for a service that is not there
         if self.timeout_s is not None:

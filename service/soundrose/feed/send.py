@@ -17,7 +17,11 @@ from soundrose.feed.wire import BYTES_PER_VALUE
 __all__ = ["FeedSocket", "Play", "Sent", "play"]
 
 QUEUE_BYTES: Final = 8 << 20  # half a second of 128 hydrophones at 32 kHz, 24 bit; more would only hide a slow service
-HEARTBEAT_MS, SILENCE_MS = 2_000, 6_000
+#: the kernel asks whether the service is there. Not ZeroMQ: a service that makes a source wait answers no heartbeat
+#: (it stands behind the samples), and the cut connection would lose what is in flight
+KEEPALIVE: Final = (
+    (zmq.TCP_KEEPALIVE, 1), (zmq.TCP_KEEPALIVE_IDLE, 5), (zmq.TCP_KEEPALIVE_INTVL, 5), (zmq.TCP_KEEPALIVE_CNT, 3),
+)  # fmt: skip
 LINGER_S: Final = 10.0
 
 
@@ -59,8 +63,7 @@ class FeedSocket:
             (zmq.SNDHWM, max(1, QUEUE_BYTES // block_bytes)),
             (zmq.IMMEDIATE, 1),  # nothing piles up for a service that is not there
             (zmq.LINGER, round(1000 * min(LINGER_S, timeout_s))),
-            (zmq.HEARTBEAT_IVL, HEARTBEAT_MS),
-            (zmq.HEARTBEAT_TIMEOUT, SILENCE_MS),
+            *KEEPALIVE,
             (zmq.SNDTIMEO, round(1000 * timeout_s)),
         ):
             self._socket.setsockopt(option, value)
