@@ -47,6 +47,20 @@ def test_value_torn_at_any_byte_leaves_the_one_before(descriptor):
         assert SharedRecord(descriptor).read() in (b"a" * 300, b"b" * 300)
 
 
+def test_reader_held_up_between_the_slots_looks_again(descriptor, monkeypatch):
+    """The writer is at the one slot when it is read, and at the other when that is: neither reads whole."""
+    writer, reader = SharedRecord(descriptor), SharedRecord(descriptor)
+    writer.write(b"value")
+    whole, calls = SharedRecord._slot, []
+
+    def slot(self, which):
+        calls.append(which)
+        return (0, b"") if len(calls) <= 2 else whole(self, which)
+
+    monkeypatch.setattr(SharedRecord, "_slot", slot)
+    assert reader.read() == b"value"
+
+
 def test_value_longer_than_a_slot_is_refused(descriptor):
     with pytest.raises(ValueError, match="at most"):
         SharedRecord(descriptor).write(bytes(RECORD_BYTES))

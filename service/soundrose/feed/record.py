@@ -9,6 +9,7 @@ __all__ = ["RECORD_BYTES", "SharedRecord", "make_record_file"]
 
 _SLOT_BYTES = 64 * 1024
 RECORD_BYTES = 2 * _SLOT_BYTES
+_LOOKS = 100  #: a writer that is at both slots while one is read is away from one the next moment
 _HEAD = struct.Struct("<QII")  # write number, payload length, CRC-32 of the payload
 
 
@@ -29,6 +30,7 @@ class SharedRecord:
     def __init__(self, descriptor: int) -> None:
         self._map = mmap.mmap(descriptor, RECORD_BYTES)
         self._number = max(self._slot(0)[0], self._slot(1)[0])
+        self._read = b""
 
     def _slot(self, which: int) -> tuple[int, bytes]:
         offset = which * _SLOT_BYTES
@@ -51,8 +53,17 @@ class SharedRecord:
         _HEAD.pack_into(self._map, offset, self._number, len(payload), zlib.crc32(payload))
 
     def read(self) -> bytes:
-        """The newest whole value; b"" if none was ever written."""
-        return max(self._slot(0), self._slot(1))[1]
+        """The newest whole value; b"" if none was ever written.
+
+        A reader that is held up between the slots may find the writer first at the one, then at the other: it looks
+        again, and in the end takes what it read last.
+        """
+        for _ in range(_LOOKS):
+            newest = max(self._slot(0), self._slot(1))
+            if newest[0]:
+                self._read = newest[1]
+                break
+        return self._read
 
     def close(self) -> None:
         self._map.close()
