@@ -19,6 +19,7 @@ STUCK_S = 2.0  #: no beat for this long after the first: the child is stuck, and
 START_S = 60.0  #: a child that has not sent its first ready beat by then is started anew
 _STEADY_S = 10.0  #: up this long: the next failure is a first one again
 _BACK_OFF_MOST_S = 30.0
+_REAP_S = 0.5  #: a killed process that is held up by a disk may stay longer; nobody waits for it
 
 
 def back_off_s(failures: int) -> float:
@@ -57,11 +58,24 @@ class Child:
         return 0.0 if self._process is not None else max(0.0, self._start_at - time.monotonic())
 
     def start(self, orders: Orders, inherit: Sequence[int] = ()) -> None:
-        """Start the process; it inherits the descriptors named besides its orders."""
-        sheet = os.memfd_create(f"soundrose-{self.name}")
-        os.write(sheet, orders.pack())
+        """Start the process; it inherits the descriptors named besides its orders.
+
+        Where the system has no room for a process at the moment, that is a start that failed: `why` says so.
+        """
+        self.restarts += 1
+        self._started = self._heard = time.monotonic()
         try:
-            self._process = subprocess.Popen(
+            self._process = self._popen(orders, inherit)
+        except OSError as error:
+            self._set_back(self._started, f"cannot be started: {error.strerror}")
+            return
+        self._set("starting")
+
+    def _popen(self, orders: Orders, inherit: Sequence[int]) -> "subprocess.Popen[bytes]":
+        sheet = os.memfd_create(f"soundrose-{self.name}")
+        try:
+            os.write(sheet, orders.pack())
+            return subprocess.Popen(
                 [sys.executable, "-m", "soundrose", "child", str(sheet)],
                 stdin=subprocess.PIPE,
                 stdout=sys.stderr.fileno(),  # standard output belongs to the ready line
@@ -71,9 +85,6 @@ class Child:
             )
         finally:
             os.close(sheet)
-        self.restarts += 1
-        self._started = self._heard = time.monotonic()
-        self._set("starting")
 
     def hear(self, pid: int, ready: bool, facts: Mapping[str, Any]) -> bool:
         """Take a beat; True if it brought the child up."""
@@ -103,9 +114,8 @@ class Child:
                 return None
             self.kill()
         else:
-            why = f"ended by signal {signal.Signals(-code).name}" if code < 0 else f"ended with status {code}"
-        self._clear(now)
-        self.why = f"{why}; {self._failures} in a row" if self._failures > 1 else why
+            why = f"ended by signal {_signal_name(-code)}" if code < 0 else f"ended with status {code}"
+        self._clear(now, why)
         return why
 
     def excuse(self) -> None:
@@ -123,29 +133,42 @@ class Child:
                 self._process.stdin.close()
 
     def kill(self) -> None:
-        """End it now, stopped or not, and take its exit status."""
+        """End it now, stopped or not, and take its exit status if it has one in time."""
         if self._process is None:
             return
         with contextlib.suppress(ProcessLookupError):
             self._process.kill()
-        self._process.wait()
+        with contextlib.suppress(subprocess.TimeoutExpired):
+            self._process.wait(_REAP_S)
 
     def forget(self) -> None:
         """It has ended."""
         self._process, self.garbage = None, None
         self._set("down")
 
-    def _clear(self, now: float) -> None:
+    def _clear(self, now: float, why: str) -> None:
         self.let_go()
         if self.state == "up" and now - self._up_since > _STEADY_S:
             self._failures = 0
+        self.forget()
+        self._set_back(now, why)
+
+    def _set_back(self, now: float, why: str) -> None:
         self._failures += 1
         self._start_at = now + back_off_s(self._failures)
-        self.forget()
+        self.why = f"{why}; {self._failures} in a row" if self._failures > 1 else why
 
     def _set(self, state: ChildState) -> None:
         self.state = state
         self.since_ns = time.time_ns()
+
+
+def _signal_name(number: int) -> str:
+    """SIGKILL and the like; most real-time signals have no name."""
+    try:
+        return signal.Signals(number).name
+    except ValueError:
+        return str(number)
 
 
 def _environment(own: Mapping[str, str]) -> dict[str, str]:

@@ -4,10 +4,18 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
-__all__ = ["BandBook", "FeedWatch", "status_header"]
+from soundrose.settings_types import BandSettings
+
+__all__ = ["BandBook", "FeedWatch", "map_patience_s", "status_header"]
 
 STALLED_S = 2.0  #: contract: no samples accepted for this long of host time
 _COUNTED = ("maps", "dropped_hops", "gaps")
+
+
+def map_patience_s(band: BandSettings, rate_hz: float) -> float:
+    """Seconds without a map after which a band is stale: four frames or two maps, but not less than 2 s."""
+    every_s = 1 / band.map_rate_hz if band.map_rate_hz else 0.0
+    return max(2.0, 4 * band.frame / rate_hz, 2 * every_s)
 
 
 @dataclass(slots=True)
@@ -34,15 +42,18 @@ class BandBook:
     _before: dict[str, int] = field(default_factory=lambda: dict.fromkeys(_COUNTED, 0))
     _last: dict[str, int] = field(default_factory=lambda: dict.fromkeys(_COUNTED, 0))
     _maps_changed: float = 0.0
+    _running_since: float | None = None
 
     def take(self, facts: Mapping[str, Any], now: float) -> None:
-        """Facts of a beat of the process that runs now."""
+        """Facts of a beat of the process that runs now. ValueError, TypeError, KeyError: they are none."""
         if not facts:
             return
-        if int(facts["maps"]) != self._last["maps"]:
+        last = {key: int(facts[key]) for key in _COUNTED}
+        latency = {key: None if (ms := facts["latency_ms"][key]) is None else float(ms) for key in ("p50", "p99")}
+        self.facts = {"load": float(facts["load"]), "latency_ms": latency, "kernel": str(facts["kernel"])}
+        if last["maps"] != self._last["maps"]:
             self._maps_changed = now
-        self.facts = dict(facts)
-        self._last = {key: int(facts[key]) for key in _COUNTED}
+        self._last = last
 
     def restarted(self) -> None:
         """A new process counts from 0."""
@@ -51,9 +62,15 @@ class BandBook:
             self._last[key] = 0
 
     def entry(self, *, up: bool, running: bool, now: float, patience_s: float) -> dict[str, Any]:
-        """The band's entry in the status message; `stale`: the feed runs and no map has come for `patience_s`."""
+        """The band's entry in the status message; `stale`: the feed runs, has done so for `patience_s`, and no
+        map has come for as long."""
+        if not running:
+            self._running_since = None
+        elif self._running_since is None:
+            self._running_since = now
         counted = {key: self._before[key] + self._last[key] for key in _COUNTED}
-        silent = now - self._maps_changed > patience_s
+        since = max(self._maps_changed, now if self._running_since is None else self._running_since)
+        silent = now - since > patience_s
         return {
             "load": float(self.facts.get("load", 0.0)),
             "latency_ms": self.facts.get("latency_ms", {"p50": None, "p99": None}),

@@ -12,21 +12,24 @@ from typing import Any, TextIO
 import msgpack
 import zmq
 
-from soundrose.child import Orders, new_start, set_up_logging
+from soundrose.child import Orders, SlowLog, new_start, set_up_logging
 from soundrose.children import Child
 from soundrose.errors import StartError
 from soundrose.feed.intake import snapshot_facts
 from soundrose.feed.record import SharedRecord, make_record_file
 from soundrose.notify import Systemd
 from soundrose.product.codec import Envelope
+from soundrose.product.proxy import bind_or_explain
 from soundrose.product.publisher import Publisher
 from soundrose.settings_types import BandSettings, Settings
-from soundrose.status import BandBook, FeedWatch, status_header
+from soundrose.status import BandBook, FeedWatch, map_patience_s, status_header
 from soundrose.worker import EXIT_START
 
 __all__ = ["Supervisor", "run_service"]
 
 _TICK_MS = 50
+_BEATS = 1000  #: taken in one turn at most: who sends without end does not keep the loop from its other work
+_BEAT_BYTES = 2**20
 _STATUS_S = 1.0
 _END_S = 4.0  #: contract: an orderly end within 5 s
 _PAUSE_S = 1.0  #: a turn longer than this: this process itself was held up, and no child is to blame
@@ -50,7 +53,8 @@ class Supervisor:
         self._children = {name: Child(name) for name in names}
         self._books = {band.name: BandBook() for band in settings.bands}
         self._elsewhere = {f"band:{band.name}": 0.0 for band in settings.bands if band.place == "elsewhere"}
-        self._watch = FeedWatch()
+        self._elsewhere_pids: dict[str, int] = {}
+        self._watch, self._log = FeedWatch(), SlowLog()
         self._disconnects = self._disconnects_before = 0
         self._ending = False
         self._ready = self._published = False
@@ -59,7 +63,8 @@ class Supervisor:
         self._turned = time.monotonic()
         self._control = self._context.socket(zmq.PULL)
         self._control.setsockopt(zmq.LINGER, 0)
-        self._control.bind(self._endpoints["control"])
+        self._control.setsockopt(zmq.MAXMSGSIZE, _BEAT_BYTES)
+        bind_or_explain(self._control, self._endpoints["control"], "stream.control")
         self._publisher = Publisher(
             self._context, self._endpoints["collect"], Envelope(settings.array.id, new_start()), largest=65536
         )
@@ -105,6 +110,8 @@ class Supervisor:
                 inherit = (self._record_fd,) if child.name == "ingest" else ()
                 child.start(self._orders(child.name), inherit)
                 self._status_due = 0.0
+                if child.pid is None:
+                    _log.error("%s %s; trying again in %.0f s", child.name, child.why, child.start_s)
 
     def _orders(self, name: str) -> Orders:
         return Orders(
@@ -118,21 +125,34 @@ class Supervisor:
 
     def _take_beats(self) -> None:
         wait = _TICK_MS
-        while self._control.poll(wait):
+        for _ in range(_BEATS):
+            if not self._control.poll(wait):
+                return
             wait = 0
-            beat = msgpack.unpackb(self._control.recv())
-            name, facts = beat["name"], beat["facts"]
-            if name in self._elsewhere:
-                self._elsewhere[name] = time.monotonic()
-                self._books[name.removeprefix("band:")].take(facts, time.monotonic())
-            child = self._children.get(name)
-            if child is None or beat["pid"] != child.pid:
-                continue
-            child.garbage = beat["garbage"]
-            if child.hear(beat["pid"], beat["ready"], facts):
-                _log.info("%s is up (pid %d)", name, beat["pid"])
-                self._status_due = 0.0
-            self._learn(child)
+            data = self._control.recv_multipart()[0]
+            try:  # the socket is open to other hosts where a band is worked elsewhere
+                self._take_beat(msgpack.unpackb(data))
+            except (ValueError, TypeError, LookupError, AttributeError, ArithmeticError) as error:
+                self._log.warn("beat", f"a message that is no beat came to stream.control: {error!r:.200}")
+
+    def _take_beat(self, beat: dict[str, Any]) -> None:
+        """Raises what reading a strange value may raise, for what is no beat."""
+        name, pid, facts = beat["name"], beat["pid"], beat["facts"]
+        if name in self._elsewhere:
+            book = self._books[name.removeprefix("band:")]
+            if self._elsewhere_pids.setdefault(name, pid) != pid:
+                book.restarted()
+                self._elsewhere_pids[name] = pid
+            book.take(facts, time.monotonic())
+            self._elsewhere[name] = time.monotonic()
+        child = self._children.get(name)
+        if child is None or pid != child.pid:
+            return
+        child.garbage = beat["garbage"]
+        if child.hear(pid, beat["ready"], facts):
+            _log.info("%s is up (pid %d)", name, pid)
+            self._status_due = 0.0
+        self._learn(child)
 
     def _learn(self, child: Child) -> None:
         """Endpoints with their ports filled in, counters, band figures."""
@@ -183,7 +203,7 @@ class Supervisor:
                 up=self._band_is_up(band, now),
                 running=state == "running",
                 now=now,
-                patience_s=max(2.0, 4 * band.frame / self._settings.feed.rate_hz),
+                patience_s=map_patience_s(band, self._settings.feed.rate_hz),
             )
             for band in self._settings.bands
         }
@@ -287,8 +307,4 @@ def run_service(settings: Settings, out: TextIO) -> int:
     for warning in settings.warnings:
         _log.warning("%s", warning)
     _check_store(settings.store.path)
-    try:
-        supervisor = Supervisor(settings, out)
-    except zmq.ZMQError as error:
-        raise StartError(f"stream.control: cannot listen: {error.strerror}") from None
-    return supervisor.run()
+    return Supervisor(settings, out).run()

@@ -1,5 +1,6 @@
 """One child: back-off, and the reasons given for its end. Real processes."""
 
+import os
 import subprocess
 import sys
 import time
@@ -86,3 +87,44 @@ def test_beat_of_another_pid_is_not_taken(spawn):
     child = spawn("import time; time.sleep(60)")
     assert not child.hear(child.pid + 1, ready=True, facts={})
     assert child.state == "starting"
+
+
+def test_signal_without_a_name_is_told_by_its_number(spawn):
+    child = spawn("import os; os.kill(os.getpid(), 40)")
+    assert wait_for(child.check) == "ended by signal 40"
+
+
+def test_start_that_the_system_refuses_is_a_failed_start(monkeypatch):
+    def refuse(*_, **__):
+        raise BlockingIOError(11, "Resource temporarily unavailable")
+
+    monkeypatch.setattr(children.subprocess, "Popen", refuse)
+    child = Child("test")
+    child.start(Sheet())
+    assert (child.state, child.pid, child.due) == ("down", None, True)
+    child.start(Sheet())
+    assert not child.due
+    assert child.why == "cannot be started: Resource temporarily unavailable; 2 in a row"
+
+
+def test_killed_process_that_a_disk_holds_up_is_not_waited_for(spawn, monkeypatch):
+    child = spawn("import time; time.sleep(60)")
+    process = child._process
+    monkeypatch.setattr(process, "kill", lambda: None)  # as if it were not to be interrupted
+    began = time.monotonic()
+    child.kill()
+    assert time.monotonic() - began < 20
+    assert process.poll() is None
+    monkeypatch.undo()
+
+
+def test_fifty_restarts_leave_no_descriptor_and_no_zombie(spawn):
+    child = spawn("raise SystemExit(1)")
+    wait_for(child.check)
+    before = sorted(os.listdir("/proc/self/fd"))
+    for _ in range(50):
+        child.start(Sheet())
+        wait_for(child.check)
+    assert sorted(os.listdir("/proc/self/fd")) == before
+    with pytest.raises(ChildProcessError):
+        os.waitpid(-1, os.WNOHANG)

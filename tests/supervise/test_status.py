@@ -1,8 +1,11 @@
 """The status message: states of the feed, figures of bands over restarts."""
 
+from dataclasses import replace
+
 import pytest
 
-from soundrose.status import BandBook, FeedWatch, status_header
+from soundrose.settings_types import BandSettings
+from soundrose.status import BandBook, FeedWatch, map_patience_s, status_header
 
 
 def facts(maps: int, dropped: int = 0, gaps: int = 0, p99: float | None = 9.0) -> dict:
@@ -42,7 +45,24 @@ def test_band_counters_go_on_over_a_restart_of_its_process():
 def test_band_is_stale_when_it_is_down_or_silent_while_the_feed_runs(up, running, silent_s, stale):
     book = BandBook()
     book.take(facts(1), 100.0)
+    book.entry(up=up, running=running, now=100.0, patience_s=2.0)
     assert book.entry(up=up, running=running, now=100.0 + silent_s, patience_s=2.0)["stale"] is stale
+
+
+def test_band_is_not_stale_because_the_feed_was_away():
+    book = BandBook()
+    book.take(facts(1), 100.0)
+    book.entry(up=True, running=False, now=200.0, patience_s=2.0)
+    assert not book.entry(up=True, running=True, now=300.0, patience_s=2.0)["stale"]  # no map can be there yet
+    assert not book.entry(up=True, running=True, now=301.0, patience_s=2.0)["stale"]
+    assert book.entry(up=True, running=True, now=303.0, patience_s=2.0)["stale"]
+
+
+def test_patience_with_a_band_follows_its_frames_and_the_rate_of_its_maps():
+    band = BandSettings("a", (10.0, 400.0), 64, 9, (0, 1))
+    assert map_patience_s(band, 1000.0) == 2.0
+    assert map_patience_s(replace(band, frame=4096), 1000.0) == 4 * 4.096
+    assert map_patience_s(replace(band, map_rate_hz=0.1), 1000.0) == 20.0
 
 
 def test_load_and_latency_at_the_top_are_those_of_the_worst_band():
