@@ -21,6 +21,7 @@ import zmq
 from threadpoolctl import threadpool_limits
 
 from soundrose.garbage import GarbageWatch
+from soundrose.product.connecting import connect_to
 from soundrose.settings_types import LogFormat, Settings
 
 __all__ = [
@@ -113,7 +114,7 @@ class Heartbeat:
         self._socket = context.socket(zmq.PUSH)
         self._socket.setsockopt(zmq.LINGER, 200)
         self._socket.setsockopt(zmq.SNDHWM, 64)
-        self._socket.connect(endpoint)
+        connect_to(self._socket, endpoint)
         self._name, self._next = name, 0.0
         self._garbage = GarbageWatch()
 

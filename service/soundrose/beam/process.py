@@ -2,6 +2,7 @@
 
 import time
 from collections import deque
+from collections.abc import Callable
 from dataclasses import replace
 from typing import Any
 
@@ -16,6 +17,7 @@ from soundrose.feed.hop import Note
 from soundrose.feed.ring import Given
 from soundrose.feed.stream import Report, Welcome, decode_given, encode_report
 from soundrose.product.codec import Envelope
+from soundrose.product.connecting import connect_to
 from soundrose.product.messages import MapProduct
 from soundrose.product.publisher import Publisher
 from soundrose.settings_types import BandSettings, Settings
@@ -62,13 +64,14 @@ class BandProcess:
     """The sockets around a `BandStage`."""
 
     def __init__(
-        self, orders: Orders, band: BandSettings, context: "zmq.Context[zmq.Socket[bytes]]", heart: Heartbeat
-    ) -> None:
+        self, orders: Orders, band: BandSettings, context: "zmq.Context[zmq.Socket[bytes]]", heart: Heartbeat,
+        ending: Callable[[], bool] = bool,
+    ) -> None:  # fmt: skip
         self._settings: Settings = orders.settings
         self._band = band
         self._start = new_start()
         self._log = SlowLog()
-        self._heart = heart
+        self._heart, self._ending = heart, ending
         self._ingest, self._session = "", self._start
         self._stage = BandStage(orders.settings, band, progress=self.beat)
         self._times = BandTimes(orders.settings.feed.rate_hz)
@@ -84,12 +87,12 @@ class BandProcess:
         self._hops.setsockopt(zmq.HEARTBEAT_IVL, 2000)  # a host that vanished without a word: the connection ends
         self._hops.setsockopt(zmq.HEARTBEAT_TIMEOUT, 10000)
         self._lost = self._hops.get_monitor_socket(zmq.EVENT_DISCONNECTED)
-        self._hops.connect(orders.endpoints["stream"])
+        connect_to(self._hops, orders.endpoints["stream"])
         self._publisher = Publisher(
             context,
             orders.endpoints["collect"],
             Envelope(orders.settings.array.id, self._start),
-            patient=orders.settings.feed.overload == "hold",
+            patient=self._wait if orders.settings.feed.overload == "hold" else None,
             largest=4 * band.beams * band.frame // 2,
         )
 
@@ -135,6 +138,11 @@ class BandProcess:
         """Send a beat if one is due; called from the loop, and while new weights are made."""
         if self._heart.due:
             self._heart.beat(ready=self.joined, facts=self.facts() if self.joined else None)
+
+    def _wait(self) -> bool:
+        """The proxy does not take a map: whether to wait on."""
+        self.beat()
+        return not self._ending()
 
     def close(self) -> None:
         self._hops.disable_monitor()
@@ -186,7 +194,8 @@ def main(orders: Orders) -> int:
     context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
     heart = Heartbeat(context, orders.endpoints["control"], orders.name)
     heart.beat(ready=False)
-    process = BandProcess(orders, orders.settings.band(orders.name.removeprefix("band:")), context, heart)
+    band = orders.settings.band(orders.name.removeprefix("band:"))
+    process = BandProcess(orders, band, context, heart, lifeline.ending.is_set)
     try:
         while not lifeline.ending.is_set():
             process.turn()

@@ -10,8 +10,8 @@ from soundrose.child import Heartbeat, Orders, SlowLog, set_up_child
 from soundrose.contact.changes import ChangeWatch
 from soundrose.contact.commands import Answer, Command, decode_command, encode_answer, note_payload
 from soundrose.errors import WireError
-from soundrose.product.addresses import connect_address
 from soundrose.product.codec import decode_published
+from soundrose.product.connecting import connect_to
 from soundrose.product.proxy import bind_or_explain
 from soundrose.store.event_log import Entry, EventLog
 from soundrose.store.items import NewEvent
@@ -107,7 +107,7 @@ class ContactsProcess:
         for socket in (self._news, self._commands):
             socket.setsockopt(zmq.LINGER, 100)
         bind_or_explain(self._commands, orders.endpoints["commands"], "stream.commands")
-        self._news.connect(connect_address(orders.endpoints["publish"]))
+        connect_to(self._news, orders.endpoints["publish"])
         self._poller = zmq.Poller()
         self._poller.register(self._news, zmq.POLLIN)
         self._poller.register(self._commands, zmq.POLLIN)

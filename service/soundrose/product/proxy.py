@@ -4,18 +4,22 @@ import zmq
 
 from soundrose.child import Heartbeat, Orders, set_up_child
 from soundrose.errors import StartError
+from soundrose.product.addresses import is_ipv6
 
 __all__ = ["bind_or_explain", "main", "subscriber_queue"]
 
 _QUEUE_BYTES = 256 * 2**20
 _POLL_MS = 100
+_SUBSCRIPTION_BYTES = 64 * 1024  #: a subscriber sends topics, which are short
 _BATCH = 64
 
 
 def bind_or_explain(socket: "zmq.Socket[bytes]", endpoint: str, key: str) -> str:
     """Bind and return the endpoint in full (a port of 0 or * filled in). StartError says what to do if it is taken."""
+    if is_ipv6(endpoint):
+        socket.setsockopt(zmq.IPV6, 1)
     try:
-        socket.bind(endpoint.replace(":0", ":*") if endpoint.endswith(":0") else endpoint)
+        socket.bind(endpoint.removesuffix(":0") + ":*" if endpoint.endswith(":0") else endpoint)
     except zmq.ZMQError as error:
         raise StartError(
             f"{key}: cannot listen at {endpoint}: {error.strerror}. Is another service running there? "
@@ -45,6 +49,7 @@ def main(orders: Orders) -> int:
     outgoing.setsockopt(zmq.SNDHWM, queue)
     for socket in (incoming, outgoing):
         socket.setsockopt(zmq.LINGER, 300)
+    outgoing.setsockopt(zmq.MAXMSGSIZE, _SUBSCRIPTION_BYTES)
     try:
         bind_or_explain(incoming, orders.endpoints["collect"], "stream.collect")
         endpoint = bind_or_explain(outgoing, orders.endpoints["publish"], "publish.bind")

@@ -1,22 +1,27 @@
 """process: sends what a process has to publish to the proxy."""
 
-from collections.abc import Mapping
+import time
+from collections.abc import Callable, Mapping
 from typing import Any
 
 import zmq
 
 from soundrose.product.codec import Envelope, encode_map, encode_plain
+from soundrose.product.connecting import connect_to
 from soundrose.product.messages import MapProduct
 
 __all__ = ["Publisher"]
 
 _QUEUE_BYTES = 128 * 2**20
+_TRY_MS = 200  #: a patient sender tells of itself so often while it waits ...
+_PATIENCE_S = 60.0  #: ... and waits so long: a proxy that is stuck is started anew long before
 
 
 class Publisher:
     """A PUB socket connected to the proxy, with the envelope of this process.
 
-    patient : `hold`: wait for the proxy rather than lose a message (while it is there at all).
+    patient : `hold`: wait for the proxy rather than lose a message. Called now and then meanwhile; False ends the wait.
+        None: never wait.
     largest : bytes of the largest message, from which the bound of the queue in messages follows.
     """
 
@@ -26,7 +31,7 @@ class Publisher:
         endpoint: str,
         envelope: Envelope,
         *,
-        patient: bool = False,
+        patient: Callable[[], bool] | None = None,
         largest: int = 4096,
     ) -> None:
         self._socket = context.socket(zmq.PUB)
@@ -34,10 +39,11 @@ class Publisher:
         self._socket.setsockopt(zmq.SNDHWM, max(16, min(1000, _QUEUE_BYTES // max(largest, 1))))
         self._socket.setsockopt(zmq.RECONNECT_IVL, 20)
         self._socket.setsockopt(zmq.RECONNECT_IVL_MAX, 200)
-        if patient:
+        self._waiting = patient
+        if patient is not None:
             self._socket.setsockopt(zmq.XPUB_NODROP, 1)
-            self._socket.setsockopt(zmq.SNDTIMEO, 500)
-        self._socket.connect(endpoint)
+            self._socket.setsockopt(zmq.SNDTIMEO, _TRY_MS)
+        connect_to(self._socket, endpoint)
         self._envelope = envelope
 
     def send_map(self, product: MapProduct, latency_ms: float | None) -> None:
@@ -47,10 +53,14 @@ class Publisher:
         self._send(encode_plain(self._envelope, topic, header))
 
     def _send(self, parts: list[Any]) -> None:
-        try:
-            self._socket.send_multipart(parts, copy=False)
-        except zmq.Again:  # the proxy does not take it within SNDTIMEO; `seq` shows the hole
-            pass
+        until = time.monotonic() + _PATIENCE_S
+        while True:
+            try:
+                self._socket.send_multipart(parts, copy=False)
+                return
+            except zmq.Again:
+                if self._waiting is None or time.monotonic() > until or not self._waiting():
+                    return  # `seq` shows the hole
 
     def close(self) -> None:
         self._socket.close()
