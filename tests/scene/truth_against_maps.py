@@ -25,6 +25,7 @@ LEAST_BINS = 24  # in which a contact must stand out: fewer do not average the n
 SETTLE_S = 4.0
 LINES = 4  # bins beside a tone that are left out
 CHECKS_S = 2.0
+LINES_MAPS = 100  # averaged for hum and strum, whose amplitude breathes
 
 
 @dataclass
@@ -68,11 +69,13 @@ def compare(scene, settings, seconds):
             line_sums[band.band.name][0] += power
             line_sums[band.band.name][1] += band.noise() + sum(band.sources().values())
             line_sums[band.band.name][2] += 1
+            if line_sums[band.band.name][2] >= LINES_MAPS:
+                total, rest, count = line_sums[band.band.name]
+                check_lines(band, total / count, rest / count, report)
+                line_sums[band.band.name] = [0 * total, 0 * rest, 0]
             if end / scene.rate_hz >= due[band.band.name]:
                 due[band.band.name] += CHECKS_S
                 check(band, power, end / scene.rate_hz, report)
-    for name, (total, rest, count) in line_sums.items():
-        check_lines(bands[name], total / max(count, 1), rest / max(count, 1), report)
     return report
 
 
@@ -96,7 +99,9 @@ def check(band, power, t_s, report):
         true, found = everything[:, chosen].sum(axis=1), power[:, chosen].sum(axis=1)
         width = _width(band, own[beam, chosen], chosen, true_cos)
         near = np.abs(band.cos - true_cos) <= max(width, 2.1 * (band.cos[0] - band.cos[1]))
-        peaked = _is_peak(band.cos, true, near)  # not on the skirt of something louder
+        top = int(np.argmax(np.where(near, true, 0)))
+        mine = own[top, chosen].sum()  # a peak, and its own: not one on the skirt of something louder
+        peaked = _is_peak(band.cos, true, near) and mine > SNR * (true[top] - mine)
         report.findings.append(
             Finding(
                 band.band.name, emitter.name, t_s, int(chosen.sum()),
@@ -228,8 +233,10 @@ def main():
             print(json.dumps(vars(finding)))
     for row in summary(report):
         print(json.dumps(row))
-    for line in report.lines:
-        print("line", *line)
+    for name, f in sorted({line[:2] for line in report.lines}):
+        mine = np.array([line[2:] for line in report.lines if line[:2] == (name, f)])
+        print(f"{name} {f:g} Hz: {len(mine)} averages; peak true {mine[:, 0].mean():.1f} deg, measured {mine[:, 1].mean():.1f};"
+              f" level {mine[:, 2].mean():+.2f} dB; pattern over beams within {mine[:, 3].max():.2f} dB")  # fmt: skip
     found = [b for b in report.bounce if b[2] is not None]
     if found:
         away = np.array([b[3] for b in found])
