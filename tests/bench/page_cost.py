@@ -94,7 +94,7 @@ def measure(seconds: float, size: tuple[int, int]) -> dict[str, Any]:
             page = context.new_page()
             page.add_init_script(f"({COUNT_BYTES})()")
             page.goto(service.http)
-            page.wait_for_function("window.got.maps > 40")
+            page.wait_for_function("() => window.got.maps > 40")
             pids = processes(profile)
             got, began, used = page.evaluate("window.got"), time.monotonic(), cpu_s(pids)
             memory = [memory_mb(pids)]

@@ -39,7 +39,7 @@ def measure(seconds: float) -> dict[str, Any]:
         browser = playwright.chromium.launch(executable_path=chromium, args=FLAGS)
         page = browser.new_page(viewport={"width": 1920, "height": 1080})
         page.goto(service.http)
-        page.wait_for_function("Number(document.getElementById('record').dataset.rows) > 4")
+        page.wait_for_function("() => Number(document.getElementById('record').dataset.rows) > 4")
         page.evaluate(WATCH)
         page.wait_for_timeout(seconds * 1000)
         drawn = np.array(page.evaluate("window.drawn"))

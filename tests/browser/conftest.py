@@ -30,7 +30,7 @@ def chromium() -> Iterator[Browser]:
         browser.close()
 
 
-@pytest.fixture(scope="module")
+@pytest.fixture(scope="session")
 def watched(tmp_path_factory: pytest.TempPathFactory) -> Iterator[tuple[Service, Sea]]:
     """A service with its sea, hydrophone 17 dead; a test that stops the sea lets it go on again."""
     with sea(tmp_path_factory.mktemp("sea"), dead=(17,)) as running:

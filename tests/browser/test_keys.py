@@ -58,7 +58,8 @@ def test_help_lists_every_key_and_the_cautions(watched: tuple[Service, Sea], ope
 def test_the_pointer_moves_by_beam_and_bin(watched: tuple[Service, Sea], opened) -> None:
     screen: Screen = opened(watched[0].http)
     screen.wait_live()
-    screen.page.keyboard.press("m")
+    screen.point("map", 126, 900)
+    screen.page.keyboard.press("h")
     screen.wait("document.querySelector('#pin').textContent === 'held'")
     angle = lambda: float(screen.under_pointer()["Cone angle"].split("°")[0])  # noqa: E731
     assert angle() == pytest.approx(126, abs=1.5)
@@ -71,9 +72,14 @@ def test_the_pointer_moves_by_beam_and_bin(watched: tuple[Service, Sea], opened)
     hz = screen.under_pointer()["Frequency"]
     screen.page.keyboard.press("ArrowRight")
     assert screen.under_pointer()["Frequency"] != hz
-    screen.page.keyboard.press("m")
+    screen.page.keyboard.press("n")
+    assert angle() == pytest.approx(126, abs=2)
     screen.page.keyboard.press("n")
     assert angle() == pytest.approx(64, abs=2)
+    screen.page.keyboard.press("ArrowDown")
+    screen.page.keyboard.press("m")  # the ship where its beam is narrowest
+    assert angle() == pytest.approx(64, abs=2)
+    assert float(screen.under_pointer()["Frequency"].split()[0]) > 1.1
     screen.page.keyboard.press("h")
     screen.wait("document.querySelector('#pin').textContent === ''")
 

@@ -3,6 +3,7 @@
 import { next, DISTANCES_M, SPANS_S } from "./choices.js";
 import { COLOUR_MAPS } from "./colourmaps.js";
 import { DIMMER, TIMES } from "./palettes.js";
+import { moveBy, toNextSummit, toOutstanding } from "./pointer.js";
 
 /** @typedef {import("./keys.js").Action} Action @typedef {import("./display.js").Display} Display */
 
@@ -39,12 +40,12 @@ function pointerActions(d) {
   return [
     ...moves.map(([id, key, shown, beams, bins]) => ({
       id: `move-${id}`, keys: [key], shown, text: `pointer one ${beams === 0 ? "bin" : "beam"} ${id} (Shift: ten)`,
-      run: (/** @type {boolean} */ big) => d.move(beams * (big ? 10 : 1), bins * (big ? 10 : 1)),
+      run: (/** @type {boolean} */ big) => moveBy(d, beams * (big ? 10 : 1), bins * (big ? 10 : 1)),
     })),
-    { id: "loudest", keys: ["m"], shown: "M", text: "pointer to the loudest cell in view", button: "loudest",
-      run: () => d.toLoudest() },
+    { id: "outstanding", keys: ["m"], shown: "M", text: "pointer to the cell most over the mean over beams",
+      button: "stands out", run: () => toOutstanding(d) },
     { id: "summit", keys: ["n"], shown: "N", text: "pointer to the next beam that stands out at this frequency",
-      button: "next beam", run: () => d.toNextSummit() },
+      button: "next beam", run: () => toNextSummit(d) },
     { id: "pin", keys: ["h"], shown: "H", text: "hold the pointer, or let it go (or a click)", button: "hold",
       run: () => d.pin(!d.pinned) },
   ];

@@ -5,17 +5,17 @@ import { fetchArray, fetchHistory } from "./api.js";
 import { attention } from "./attention.js";
 import { lineOf } from "./beams.js";
 import { readChoices, writeChoices } from "./choices.js";
-import { tableOf } from "./colourmaps.js";
 import { CANVASES } from "./dom.js";
 import { Age } from "./freshness.js";
 import { actionFor } from "./keys.js";
 import { SlowLimits, wanted, wantedOfRecord } from "./levels.js";
 import { Link } from "./link.js";
+import { looksOf } from "./looks.js";
 import { MapView } from "./map_view.js";
-import { paletteOf } from "./palettes.js";
-import { loudest, nextSummit } from "./readout.js";
+import { outstanding } from "./readout.js";
 import { RecordStore } from "./record.js";
 import { RecordView } from "./record_view.js";
+import { mapRequest, STATES_ONLY } from "./request.js";
 import { ResponseView } from "./response_view.js";
 import { ScaleView } from "./scale_view.js";
 import { SpectrumView } from "./spectrum_view.js";
@@ -23,6 +23,7 @@ import { StripView } from "./strip_view.js";
 import { drawTick } from "./tick_view.js";
 import { followPointer } from "./pointer.js";
 import { showChoices, showCursor, showState } from "./state_text.js";
+import { panned, zoomed } from "./zoom.js";
 
 /** @typedef {import("./types.js").LiveMap} LiveMap @typedef {import("./types.js").Range} Range */
 /** @typedef {import("./choices.js").Choices} Choices @typedef {import("./dom.js").CanvasName} CanvasName */
@@ -32,10 +33,6 @@ import { showChoices, showCursor, showState } from "./state_text.js";
 const DIGITS_MS = 2000;
 const RECORD_MS = 1000;
 const CHECK_MS = 250;
-/** Cells of a map asked for: at 8 maps a second under 620 kB/s. */
-const CELLS = 76_000;
-const RATE_HZ = 8;
-const LEAST_SPAN_HZ = 20;
 
 export class Display {
   /** @param {import("./dom.js").Page} page @param {Storage} storage @param {string} liveAddress */
@@ -185,7 +182,7 @@ export class Display {
     const first = this.map === null;
     this.map = map;
     if (this.choices.auto) this.limits.take(wanted(map), map.tEndMs);
-    if (this.cursor === null) this.cursor = loudest(map, this.range);
+    if (this.cursor === null) this.cursor = outstanding(map, this.range);
     this.draw("map", "spectrum", "response", "tick", "scale");
     if (first) this.showDigits();
   }
@@ -229,15 +226,8 @@ export class Display {
     const { map } = this.page.surfaces;
     const plot = MapView.plot(map, this.look.small);
     const ratio = map.canvas.width / Math.max(1, map.width);
-    const most = Math.max(32, Math.round(plot.height * ratio));
-    const beams = Math.ceil(this.band.beams.length / Math.ceil(this.band.beams.length / most));
-    const bins = Math.max(16, Math.min(Math.round(plot.width * ratio), Math.floor(CELLS / beams)));
-    const { low, high } = this.range;
-    const margin = this.zoomed === null ? 0 : this.band.df_hz;
-    const wants = { bands: [this.band.name], bins, beams: most, encoding: "u1", rate_hz: RATE_HZ,
-      ...(this.zoomed === null ? {} : { f_min: Math.max(0, low - margin), f_max: high + margin }) };
-    const request = this.page.hidden ? { subscribe: ["health", "status"] }
-      : { subscribe: ["map", "health", "status"], map: wants };
+    const pixels = { columns: Math.round(plot.width * ratio), rows: Math.round(plot.height * ratio) };
+    const request = this.page.hidden ? STATES_ONLY : mapRequest(this.band, pixels, this.zoomed);
     const text = JSON.stringify(request);
     if (text === this.asked) return;
     this.asked = text;
@@ -301,37 +291,32 @@ export class Display {
     return this.choices.auto ? this.limits.shown : { low: this.choices.low, high: this.choices.high };
   }
 
+  /** @returns {Range} of the band, Hz */
+  get whole() {
+    const [low, high] = this.band?.band_hz ?? [0, 1];
+    return { low, high };
+  }
+
   /** @returns {Range} frequencies shown, Hz */
   get range() {
-    const [low, high] = this.band?.band_hz ?? [0, 1];
-    return this.zoomed ?? { low, high };
+    return this.zoomed ?? this.whole;
   }
 
   /** @param {number} hz */
   within(hz) {
-    const [low, high] = this.band?.band_hz ?? [0, hz];
-    return Math.max(low, Math.min(high, hz));
+    return Math.max(this.whole.low, Math.min(this.whole.high, hz));
   }
 
   /** @param {number} factor of the span; Infinity: the whole band @param {number} [about] Hz */
   zoom(factor, about = this.cursor?.hz) {
-    const [low, high] = this.band?.band_hz ?? [0, 1];
-    const now = this.range;
-    const span = Math.max((now.high - now.low) * factor, LEAST_SPAN_HZ);
-    const middle = about === undefined || about < now.low || about > now.high ? (now.low + now.high) / 2 : about;
-    const share = (middle - now.low) / (now.high - now.low);
-    const begin = Math.max(low, Math.min(high - span, middle - share * span));
-    this.zoomed = span >= high - low ? null : { low: begin, high: begin + span };
+    this.zoomed = zoomed(this.range, this.whole, factor, about);
     this.zoomChanged();
   }
 
   /** @param {number} share of the span */
   pan(share) {
     if (this.zoomed === null) return;
-    const [low, high] = /** @type {number[]} */ (this.band?.band_hz);
-    const span = this.zoomed.high - this.zoomed.low;
-    const begin = Math.max(low, Math.min(high - span, this.zoomed.low + share * span));
-    this.zoomed = { low: begin, high: begin + span };
+    this.zoomed = panned(this.zoomed, this.whole, share);
     this.zoomChanged();
   }
 
@@ -358,29 +343,6 @@ export class Display {
     showCursor(this);
   }
 
-  /** @param {number} beams @param {number} bins */
-  move(beams, bins) {
-    if (this.map === null || this.cursor === null) return;
-    this.pin(true);
-    const step = (this.map.cos[0] - this.map.cos[this.map.beams - 1]) / Math.max(1, this.map.beams - 1);
-    this.point({ cos: this.cursor.cos - beams * step, hz: this.cursor.hz + bins * this.map.dfHz });
-  }
-
-  toLoudest() {
-    const found = this.map === null ? null : loudest(this.map, this.range);
-    if (found === null) return;
-    this.pin(true);
-    this.point(found);
-  }
-
-  toNextSummit() {
-    if (this.map === null || this.cursor === null) return;
-    const cos = nextSummit(this.map, this.cursor.hz, this.cursor.cos);
-    if (cos === null) return;
-    this.pin(true);
-    this.point({ cos });
-  }
-
   /** @param {KeyboardEvent} event */
   key(event) {
     if (this.page.help.open && event.key !== "?") return;
@@ -393,12 +355,10 @@ export class Display {
   // ---- showing
 
   dress() {
-    const palette = paletteOf(this.choices.time, this.choices.dim);
-    const sizes = sizesFor(this.choices.distanceM);
+    const { look, palette, sizes, table, tableName } = looksOf(this.choices);
     this.page.dress(palette, sizes);
-    this.tableName = `${this.choices.colours} ${palette.light}`;
-    this.table = tableOf(this.choices.colours, palette.light);
-    return { palette, ...sizes };
+    [this.table, this.tableName] = [table, tableName];
+    return look;
   }
 
   /** Mark what is to be drawn with the next frame of the screen. @param {...CanvasName} names all, if none */
@@ -445,13 +405,8 @@ export class Display {
     this.shownMs = performance.now();
     showState(this);
     showCursor(this);
-    const { state, ageS } = { state: this.age.state(performance.now() / 1000), ageS: this.age.seconds(performance.now() / 1000) };
+    const nowS = performance.now() / 1000;
     this.page.attention(attention({ link: this.link.state, status: this.status, health: this.health, map: this.map,
-      freshness: state, ageS, calibrated: this.array?.calibrated ?? true, reload: this.newer }), 4);
+      freshness: this.age.state(nowS), ageS: this.age.seconds(nowS), calibrated: this.array?.calibrated ?? true, reload: this.newer }), 4);
   }
-}
-
-/** Sizes of letters, CSS pixels. @param {number} distanceM */
-function sizesFor(distanceM) {
-  return { small: Math.ceil(19 * distanceM), body: Math.round(27 * distanceM), large: Math.round(31 * distanceM) };
 }

@@ -1,6 +1,7 @@
 // @ts-check
-/** Mouse and touch on the plots. */
+/** The pointer: by mouse and touch on the plots, and by steps and jumps. */
 import { MapView } from "./map_view.js";
+import { nextSummit, outstanding } from "./readout.js";
 import { cosAt, valueAt } from "./scale.js";
 
 /** @typedef {import("./display.js").Display} Display @typedef {import("./types.js").Plot} Plot */
@@ -41,4 +42,29 @@ function plotOf(d, name) {
   const { left, top, width, height } = d.page.surfaces[name].canvas.dataset;
   if (left === undefined) return MapView.plot(d.page.surfaces[name], d.look.small);
   return { left: Number(left), top: Number(top), width: Number(width), height: Number(height) };
+}
+
+/** @param {Display} d @param {number} beams aft @param {number} bins up */
+export function moveBy(d, beams, bins) {
+  if (d.map === null || d.cursor === null) return;
+  d.pin(true);
+  const step = (d.map.cos[0] - d.map.cos[d.map.beams - 1]) / Math.max(1, d.map.beams - 1);
+  d.point({ cos: d.cursor.cos - beams * step, hz: d.cursor.hz + bins * d.map.dfHz });
+}
+
+/** To the cell most over the mean over beams. @param {Display} d */
+export function toOutstanding(d) {
+  const found = d.map === null ? null : outstanding(d.map, d.range);
+  if (found === null) return;
+  d.pin(true);
+  d.point(found);
+}
+
+/** To the next beam that stands out at this frequency. @param {Display} d */
+export function toNextSummit(d) {
+  if (d.map === null || d.cursor === null) return;
+  const cos = nextSummit(d.map, d.cursor.hz, d.cursor.cos);
+  if (cos === null) return;
+  d.pin(true);
+  d.point({ cos });
 }

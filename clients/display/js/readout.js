@@ -1,8 +1,8 @@
 // @ts-check
 /** What is under the pointer, in words and numbers. */
-import { angleDeg, widthDeg } from "./beams.js";
+import { angleDeg, widthDeg, widthInCosine } from "./beams.js";
 import { averageOverBeams, beamAt, binAt, levelAt } from "./frame.js";
-import { bothSides, bearing, frequency, level } from "./wording.js";
+import { bearing, frequency, level, relative } from "./wording.js";
 
 /** @typedef {import("./scene.js").Scene} Scene */
 
@@ -10,7 +10,6 @@ import { bothSides, bearing, frequency, level } from "./wording.js";
 export function pointerPairs(scene) {
   const { cursor, map } = scene;
   if (cursor === null || map === null) return [["Pointer", "move it over a plot, or use the arrow keys"]];
-  const [starboard, port] = bothSides(cursor.cos);
   const beam = beamAt(map.cos, cursor.cos);
   const bin = binAt(map, cursor.hz);
   const mean = new Float32Array(map.bins);
@@ -21,13 +20,21 @@ export function pointerPairs(scene) {
   return [
     ["Frequency", frequency(cursor.hz)],
     ["Cone angle", `${bearing(angleDeg(cursor.cos))} from forward`],
-    ["Relative", `${starboard} or ${port}`],
+    ["Relative", relative(cursor.cos)],
     ["True", "-- no heading"],
-    ["Beamwidth", width === null ? "no bearing here" : `${width.toFixed(1)}° at half power`],
+    ["Beamwidth", widthText(scene, cursor, width)],
     ["Level", valid ? `${level(here)} re 1 µPa²/Hz` : "--.- dB (stale)"],
     ["Over mean", valid ? `${(here - mean[bin]).toFixed(1)} dB` : "--.- dB (stale)"],
     ["Images", imagesText(scene, cursor.cos)],
   ];
+}
+
+/** Wider than 0.8 in cosine a beam hears, but has no bearing. @param {Scene} scene
+ * @param {import("./types.js").Cursor} cursor @param {number | null} width degrees */
+function widthText(scene, cursor, width) {
+  if (scene.line === null) return "-- no hydrophone";
+  const none = widthInCosine(scene.line, cursor.hz) > 0.8;
+  return width === null ? "heard, no bearing" : `${width.toFixed(1)}°${none ? ": heard, no bearing" : " at half power"}`;
 }
 
 /** @param {Scene} scene @param {number} cos */
@@ -37,15 +44,20 @@ function imagesText(scene, cos) {
   return `from ${frequency(scene.array.sound_speed_m_s / (spacing * (1 + Math.abs(cos))))} up`;
 }
 
-/** Loudest cell in view. @param {import("./types.js").LiveMap} map @param {import("./types.js").Range} range */
-export function loudest(map, range) {
-  let best = -1;
+/**
+ * The cell in view that is most over the mean over beams: low frequencies are loud everywhere, and that is no news.
+ * @param {import("./types.js").LiveMap} map @param {import("./types.js").Range} range
+ */
+export function outstanding(map, range) {
+  const mean = new Float32Array(map.bins);
+  averageOverBeams(map, mean);
+  let [best, most] = [-1, -Infinity];
   for (let bin = 0; bin < map.bins; bin++) {
     const hz = map.f0Hz + bin * map.dfHz;
     if (hz < range.low || hz > range.high) continue;
     for (let beam = 0; beam < map.beams; beam++) {
-      const at = beam * map.bins + bin;
-      if (best < 0 || map.level[at] > map.level[best]) best = at;
+      const over = levelAt(map, beam, bin) - mean[bin];
+      if (over > most) [best, most] = [beam * map.bins + bin, over];
     }
   }
   if (best < 0) return null;

@@ -129,6 +129,8 @@ function drawHoles(ctx, plot, scene, range) {
     ctx.fillStyle = "#000000";
     ctx.fillRect(x0 - 1, plot.top, x1 - x0 + 2, plot.height);
     unknown(ctx, scene.look, { left: x0, top: plot.top, width: x1 - x0, height: plot.height });
+    ctx.fillStyle = scene.look.palette.text;
+    for (const x of [x0 - 1, x1]) ctx.fillRect(x, plot.top, 1, plot.height);
     if (middle > free) {
       label(ctx, scene.look, hole.why, Math.min(middle + 3, plot.left + plot.width - 60), plot.top + 4);
       free = middle + 3 + ctx.measureText(hole.why).width + 12;

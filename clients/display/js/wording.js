@@ -14,9 +14,11 @@ export function bearing(deg) {
 }
 
 /** Both sides: a line cannot tell them apart. @param {number} cos */
-export function bothSides(cos) {
+export function relative(cos) {
   const cone = angleDeg(cos);
-  return [`R ${bearing(cone)} starboard`, `${bearing((360 - cone) % 360)} port`];
+  const [starboard, port] = [bearing(cone), bearing((360 - cone) % 360)];
+  if (starboard === port) return `R ${starboard} ${cos > 0 ? "ahead" : "astern"}`;
+  return `R ${starboard} starboard or ${port} port`;
 }
 
 /** @param {number} hz */
