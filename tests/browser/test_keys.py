@@ -60,7 +60,7 @@ def test_the_pointer_moves_by_beam_and_bin(watched: tuple[Service, Sea], opened)
     screen.wait_live()
     screen.point("map", 126, 900)
     screen.page.keyboard.press("h")
-    screen.wait("document.querySelector('#pin').textContent === 'held'")
+    screen.wait("document.querySelector('#pin').textContent === '· held'")
     angle = lambda: float(screen.under_pointer()["Cone angle"].split("°")[0])  # noqa: E731
     assert angle() == pytest.approx(126, abs=1.5)
     begin = angle()

@@ -86,7 +86,7 @@ def test_the_read_out_gives_bearing_level_and_width_of_the_ship(watched: tuple[S
     screen.point("map", SHIP.cone_deg, 980.0)
     screen.page.mouse.down()
     screen.page.mouse.up()
-    screen.wait("document.querySelector('#pin').textContent === 'held'")
+    screen.wait("document.querySelector('#pin').textContent === '· held'")
     found = screen.under_pointer()
     assert number(found["Frequency"]) == pytest.approx(980, abs=4)
     assert number(found["Cone angle"]) == pytest.approx(SHIP.cone_deg, abs=0.5)
@@ -140,6 +140,6 @@ def test_every_axis_and_level_says_its_unit(watched: tuple[Service, Sea], opened
     said = set(screen.page.evaluate(script))
     assert {"map: frequency, Hz", "map: cone angle", "spectrum: dB re 1 µPa²/Hz", "spectrum: frequency, Hz",
             "response: dB re 1 µPa²/Hz", "record: cone angle", "map: images beyond",
-            "response: filled: one plane wave"} <= said  # fmt: skip
+            "response: filled: one wave"} <= said  # fmt: skip
     assert any(text.startswith("record: data time, UTC") for text in said)
     assert any("starboard|port" in text for text in said)

@@ -16,6 +16,8 @@ export class ResponseView {
   constructor() {
     this.predicted = new Float32Array(0);
     this.of = "";
+    /** Where the key stands, 0 at the top to 1. */
+    this.keyAt = 0;
     /** Beam at which the plane wave is put; -1 without one. */
     this.wave = -1;
   }
@@ -42,10 +44,7 @@ export class ResponseView {
       const y = rowOf(plot, scene.cursor.cos);
       visible(ctx, plot.left, y, plot.left + plot.width, y, look, [6, 4]);
     }
-    if (this.wave >= 0) {
-      label(ctx, look, "line: beams", plot.left + 4, plot.top + 4);
-      label(ctx, look, "filled: one plane wave", plot.left + 4, plot.top + 10 + look.small);
-    }
+    if (this.wave >= 0) this.drawKey(ctx, plot, look);
     staleMark(ctx, look, plot, scene.freshness, scene.ageS);
     ctx.restore();
     border(ctx, look, plot);
@@ -77,12 +76,36 @@ export class ResponseView {
     ctx.lineWidth = 1;
   }
 
+  /** What is what, where the line is lowest. @param {CanvasRenderingContext2D} ctx @param {Plot} plot
+   * @param {import("./axes.js").Look} look */
+  drawKey(ctx, plot, look) {
+    const words = ["line: beams", "filled: one wave"];
+    const wide = Math.max(...words.map((word) => ctx.measureText(word).width)) + 12;
+    const top = plot.top + 4 + this.keyAt * (plot.height - 2 * look.small - 24);
+    words.forEach((word, i) => label(ctx, look, word, plot.left + plot.width - wide, top + i * (look.small + 6)));
+  }
+
+  /** Eighth of the plot in which the line stays lowest. @param {LiveMap} map @param {number} bin */
+  lowest(map, bin) {
+    let [best, least] = [0, Infinity];
+    for (let part = 0; part < 8; part++) {
+      let top = -Infinity;
+      for (let beam = 0; beam < map.beams; beam++) {
+        const place = ((1 - map.cos[beam]) / 2) * 8;
+        if (place > part - 0.5 && place < part + 1.5) top = Math.max(top, levelAt(map, beam, bin));
+      }
+      if (top < least) [best, least] = [part / 7, top];
+    }
+    return best;
+  }
+
   /** @param {Scene} scene @param {LiveMap} map @param {number} hz */
   predict(scene, map, hz) {
     const line = /** @type {import("./beams.js").Line} */ (scene.line);
     const of = `${map.band} ${map.beams} ${line.x.length} ${hz} ${this.wave}`;
     if (this.of === of) return;
     this.of = of;
+    this.keyAt = this.lowest(map, binAt(map, hz));
     if (this.predicted.length !== map.beams) this.predicted = new Float32Array(map.beams);
     patternLevels(line, map.cos, hz, map.cos[this.wave], this.predicted);
   }

@@ -65,7 +65,7 @@ function showTitles(d) {
 export function showCursor(d) {
   const { page, cursor } = d;
   page.pairs("pointer", pointerPairs(d.scene()));
-  page.text("pin", d.pinned ? "held" : "");
+  page.text("pin", d.pinned ? "· held" : "");
   if (cursor === null) return;
   page.text("spectrum-title", `solid: beam ${bearing(angleDeg(cursor.cos))}; dashed: mean over beams (power)`);
   page.text("response-title", `at ${frequency(cursor.hz)}`);
