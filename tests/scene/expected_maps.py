@@ -29,6 +29,7 @@ class Sounds:
     """A rolling average of (beams, bins) power of each source, and its weight."""
 
     power: dict
+    bottom: dict  # the part of it that has been to the bottom, by itself
     total: float = 0.0
     end: int | None = None
 
@@ -52,7 +53,7 @@ class ExpectedBand:
         self.line = Line(scene.own, np.array(scene.array.positions_m))
         self.steer = np.exp(
             -2j * np.pi * self.f[:, None, None] * self.cos[:, None] * self.x / settings.water.sound_speed_m_s
-        )
+        ).astype(np.complex64)
         self.taper = 0.5 - 0.5 * np.cos(2 * np.pi * np.arange(self.frame) / self.frame)
         self.density = 2 / (self.rate * (self.taper**2).sum())
         self.buffers = {
@@ -60,7 +61,8 @@ class ExpectedBand:
             for i, e in enumerate(scene.emitters)
         }
         self.faults = Faults(scene.faults, scene.true_rate_hz, scene.seed)
-        self.average = Sounds({e.name: np.zeros((len(self.cos), len(self.f))) for e in scene.emitters})
+        zeros = [{e.name: np.zeros((len(self.cos), len(self.f))) for e in scene.emitters} for _ in range(2)]
+        self.average = Sounds(*zeros)
         self.noises = {}
         self.noise_sum = np.zeros((len(self.cos), len(self.f)))
 
@@ -72,16 +74,24 @@ class ExpectedBand:
         decay = 0.0 if elapsed is None or self.band.average_s == 0 else np.exp(-elapsed / self.band.average_s)
         a.total, a.end = decay * a.total + gain, end
         there, ears = self._ears(end - self.frame, channels_used)
+        rows = [row for e in self.scene.emitters for row in self._ways(e, end - self.frame, ears)]
+        heard = np.stack([row[2] for row in rows], axis=2).astype(np.complex64) if rows else None
+        beams = [] if heard is None else np.moveaxis(self.steer @ heard, 2, 0)  # (ways, bins, beams), in one pass
         for emitter in self.scene.emitters:
-            power = self._power(emitter, end - self.frame, ears)
-            a.power[emitter.name] *= decay
-            if power is not None:
-                a.power[emitter.name] += gain * power
+            for kept, only_bottom in ((a.power, False), (a.bottom, True)):
+                mine = [y for y, (name, bottom, _) in zip(beams, rows, strict=True)
+                        if name == emitter.name and (bottom or not only_bottom)]  # fmt: skip
+                power = (np.abs(sum(mine)) ** 2).T * self.density if mine else 0.0
+                kept[emitter.name] = decay * kept[emitter.name] + gain * power
         self.noise_sum = decay * self.noise_sum + gain * self._noise(there)
 
     def sources(self):
         """{name: (beams, bins) power density}"""
         return {name: power / self.average.total for name, power in self.average.power.items()}
+
+    def bottom(self):
+        """The same of what has been to the bottom."""
+        return {name: power / self.average.total for name, power in self.average.bottom.items()}
 
     def noise(self):
         return self.noise_sum / self.average.total
@@ -96,29 +106,28 @@ class ExpectedBand:
             weights = weights / (1 - self.weights[dead].sum())
         return tuple(np.round(weights, 4)), weights
 
-    def _power(self, emitter, first, weights):
-        """(beams, bins) of one frame, or None if nothing is heard in it."""
+    def _ways(self, emitter, first, weights):
+        """[(name, by the bottom, (bins, channels) weighted spectra)] of one frame, for each way that is heard."""
         scene, water = self.scene, self.scene.water
         t = (first + np.arange(self.frame)) / scene.true_rate_hz
         few = t[:: self.frame // 8]
-        spectra = []
         delay = arrivals(emitter, self.line, water, few).delay_s
         middle = t[self.frame // 2 : self.frame // 2 + 1]
         arrival = arrivals(emitter, self.line, water, middle)
         later = hydrophone_delays(arrival, self.line, water, middle)[:, 0, self.channels]
-        total = np.zeros((len(self.f), len(self.cos)), complex)
+        rows = []
         for way, bounce in enumerate(bounces_up_to(emitter.bounces)):
             curve = np.polynomial.Polynomial.fit(few, delay[way], 4)
-            spectra = self._spectrum(emitter, t - curve(t))
-            if spectra is None:
+            spectrum = self._spectrum(emitter, t - curve(t))
+            if spectrum is None:
                 continue
             loss = absorption_db_km(water, self.f, (emitter.depth_m + scene.own.array_depth_m) / 2)
-            whole = spectra * 10 ** (-loss * arrival.distance_m[way, 0] / 1000 / 20)
+            whole = spectrum * 10 ** (-loss * arrival.distance_m[way, 0] / 1000 / 20)
             gains = bounce.factor(water.bottom_loss_db) / (later[way] * water.sound_speed_m_s)
             shift = (later[way] - arrival.delay_s[way, 0]) / (1 - arrival.stretch[way, 0])
             heard = weights * gains * np.exp(-2j * np.pi * self.f[:, None] * shift)
-            total += whole[:, None] * np.einsum("fbm,fm->fb", self.steer, heard)
-        return (np.abs(total) ** 2).T * self.density if total.any() else None
+            rows.append((emitter.name, bounce.bottom > 0, whole[:, None] * heard))
+        return rows
 
     def _spectrum(self, emitter, emitted_s):
         """(bins,) transform of the tapered waveform at these times of emission, for a time axis at the array's rate."""

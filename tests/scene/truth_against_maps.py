@@ -123,15 +123,17 @@ def check_bounce(band, power, everything, sources, clear, t_s, report):
         arrival = arrivals(emitter, band.line, band.scene.water, t)
         cosines = arrival.direction[2, 0] @ band.line.forward(t)[0]
         beam = int(np.argmin(np.abs(band.cos - cosines)))
-        mine = sources[emitter.name]
-        others = everything - mine
+        mine, whole = band.bottom()[emitter.name], sources[emitter.name]
+        others = everything - whole + np.abs(np.sqrt(whole) - np.sqrt(mine)) ** 2  # the straight way among them
         chosen = clear & (mine[beam] > SNR * others[beam])
         if chosen.sum() < LEAST_BINS:
             continue
         width = _width(band, mine[beam, chosen], chosen, float(cosines))
         near = np.abs(band.cos - cosines) <= width
         found = power[:, chosen].sum(axis=1)
-        if not _is_peak(band.cos, found, near):
+        true = everything[:, chosen].sum(axis=1)
+        top = int(np.argmax(np.where(near, true, 0)))
+        if not _is_peak(band.cos, true, near) or mine[top, chosen].sum() < SNR * others[top, chosen].sum():
             report.bounce.append((t_s, float(np.degrees(np.arccos(cosines))), None, None))
             continue
         peak = _peak(band.cos, found, near)

@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 from soundrose.scene.place import Line, arrivals, bounces_up_to, hydrophone_delays
 from soundrose.scene.scene_types import Emitter, Water
 from soundrose.scene.sea import ainslie_mccolm, francois_garrison
-from soundrose.scene.waveforms import WaveformBuffer, waveform
+from soundrose.scene.waveforms import WaveformBuffer, band_edge, waveform
 
 __all__ = ["KNOTS", "Renderer", "Steps", "absorption_db_km", "knot_samples"]
 
@@ -93,6 +93,8 @@ class _Source:
         self._factor = np.array([bounce.factor(water.bottom_loss_db) for bounce in bounces])
         mean_depth = (emitter.depth_m + float(line.origin(np.zeros(1))[0, 2])) / 2
         self._neper_m = absorption_db_km(water, steps.frequency_hz, mean_depth) / 1000 * np.log(10) / 20
+        # nothing at half the rate, where a delay by a fraction of a sample would ring from the ends of a frame inwards
+        self._edge = band_edge(steps.frequency_hz, steps.rate_hz)
         self._held = np.zeros((len(bounces), 0), np.float32)
         u = np.arange(steps.step) / steps.step
         self._cubic = np.stack(  # Lagrange, knots -1, 0, 1, 2
@@ -139,7 +141,7 @@ class _Source:
         later = hydrophone_delays(arrival, self._line, self._water, t)
         shift = (later - arrival.delay_s[..., None]) / (1 - arrival.stretch[..., None]) - self._steps.late_s
         distance = np.maximum(later * self._water.sound_speed_m_s, 1.0)
-        loss = np.exp(-arrival.distance_m[..., None] * self._neper_m).astype(np.float32)
+        loss = (self._edge * np.exp(-arrival.distance_m[..., None] * self._neper_m)).astype(np.float32)
         return shift * self._steps.rate_hz, self._factor[:, None, None] / distance, loss
 
 
