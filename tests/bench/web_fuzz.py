@@ -1,7 +1,7 @@
 """Generated HTTP requests and live requests against the whole service under a live feed, for minutes on end.
 
 `python tests/bench/web_fuzz.py [--minutes 10]`. Not part of the suite (which has a short form of each): prints what
-was asked and answered, and how the serve process grew. Ends with status 1 on a 5xx other than 503, on a live socket
+was asked and answered, and how the serve process grew. Ends with status 1 on an answer that is not documented (of the 5xx only 503 is), on a live socket
 that dies without a close code, on growth of memory by more than a quarter in the second half, or on open files left.
 """
 
@@ -10,7 +10,6 @@ import asyncio
 import json
 import os
 import random
-import re
 import subprocess
 import sys
 import tempfile
@@ -154,8 +153,7 @@ def report(result: subprocess.CompletedProcess[str], seen: Counter, sizes: list,
     print(
         f"serve: {sizes[0][0]:.0f} MB at first, {middle:.0f} MB in the middle, {end:.0f} MB at the end, {files} files"
     )
-    worst = re.findall(r"\b5(?!03)\d\d\b", result.stdout)
-    bad = result.returncode != 0 or any(restarts.values()) or end > 1.25 * middle or seen["closed None"] or worst
+    bad = result.returncode != 0 or any(restarts.values()) or end > 1.25 * middle or seen["closed None"]
     print("bad" if bad else "good")
     return 1 if bad else 0
 
