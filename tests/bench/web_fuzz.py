@@ -1,8 +1,9 @@
 """Generated HTTP requests and live requests against the whole service under a live feed, for minutes on end.
 
 `python tests/bench/web_fuzz.py [--minutes 10]`. Not part of the suite (which has a short form of each): prints what
-was asked and answered, and how the serve process grew. Ends with status 1 on an answer that is not documented (of the 5xx only 503 is), on a live socket
-that dies without a close code, on growth of memory by more than a quarter in the second half, or on open files left.
+was asked and answered, and how the serve process grew. Ends with status 1 on an answer that is not documented (of the
+5xx only 503 is), on a live socket that dies without a close code, on a process that had to be started again, or on
+growth of memory by more than a quarter in the last third.
 """
 
 import argparse
