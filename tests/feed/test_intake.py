@@ -261,7 +261,7 @@ def test_facts_of_a_snapshot_are_those_of_the_status_message(source_for):
     assert fresh == snapshot_facts(source_for().intake.snapshot())
     assert set(fresh) == {
         "run", "next", "blocks", "samples", "gaps", "lost_samples", "trimmed_samples", "unused_samples", "restarts",
-        "clock_jumps", "late", "dropped",
+        "clock_jumps", "late", "dropped", "clock",
     }  # fmt: skip
     source = source_for()
     source.block(3, 100)

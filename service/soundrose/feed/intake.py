@@ -10,13 +10,14 @@ from typing import Literal, TypeAlias
 from soundrose.errors import WireError
 from soundrose.feed.assemble import HopAssembler
 from soundrose.feed.calibrate import Calibration
+from soundrose.feed.clock import SampleClock
 from soundrose.feed.decoding import decode
 from soundrose.feed.framing import FrameStarts, unused_samples
 from soundrose.feed.health import Health
 from soundrose.feed.hop import Hop, Note, RunEnd, hop_length
 from soundrose.feed.notes import NotesInForce
 from soundrose.feed.sequence import Counters, Runs, RunState
-from soundrose.feed.snapshot import pack_count, pack_rest, snapshot_facts, unpack_snapshot
+from soundrose.feed.snapshot import pack_clock, pack_count, pack_rest, snapshot_facts, unpack_snapshot
 from soundrose.feed.wire import Expected, Octets, RunEndMessage, Samples
 from soundrose.product.messages import HealthProduct
 from soundrose.settings_types import Settings
@@ -43,6 +44,7 @@ class Intake:
     Attributes
     ----------
     counters : Counters, of CONTRACT's status.
+    clock : SampleClock, what the block times say of it; nothing downstream depends on it.
     last_drop : (reason, detail) of the last message dropped, None before the first.
     """
 
@@ -56,16 +58,19 @@ class Intake:
         self.hop_length = hop_length(frames)
         self._hops = HopAssembler(array.channels, self.hop_length, rate, self._calibration, self._health)
         self.counters, self._state, self._notes = Counters(), RunState(), NotesInForce()
+        self.clock = SampleClock(rate)
         if snapshot:
-            self._state, self.counters, states, notes = unpack_snapshot(snapshot, array.channels)
-            self._health.resume(states)
-            self._notes = NotesInForce(notes)
+            taken = unpack_snapshot(snapshot, array.channels)
+            self._state, self.counters = taken.state, taken.counters
+            self._health.resume(taken.states)
+            self._notes = NotesInForce(taken.notes)
+            self.clock.resume(int(taken.clock["jumps"]))
             self._give_up_hop(frames)
         self._runs = Runs(rate, frames, self.counters, self._state)
         self._run = self._state.run
         self._hops.begin(self._run or "", self._state.epoch)
         self.last_drop: tuple[str, str] | None = None
-        self._rest = self._packed_rest()
+        self._rest, self._clock = self._packed_rest(), pack_clock(self.clock.facts())
 
     def _give_up_hop(self, frames: Sequence[int]) -> None:
         """The hop that was under way is lost: what was handed on of the stretch is whole hops, and a new one begins."""
@@ -96,7 +101,7 @@ class Intake:
         Parameters
         ----------
         parts : its frames, bytes or buffers; not kept.
-        received_ns : host monotonic clock at receipt; passed on in hops, not used.
+        received_ns : host monotonic clock at receipt; passed on in hops, and to `clock`.
 
         Returns
         -------
@@ -135,6 +140,8 @@ class Intake:
         if verdict.breaks or run != self._run:
             self._run = run
             self._hops.begin(run, self._state.epoch)
+        if self.clock.push(self._state.epoch, self._state.first, self._state.t_ns, received_ns):
+            self._clock = pack_clock(self.clock.facts())
         block = self._calibration.open(message, verdict.skip)
         pieces = self._hops.push(block, self._state.first, self._state.t_ns, received_ns)
         for piece in pieces:
@@ -178,7 +185,7 @@ class Intake:
 
     def snapshot(self) -> bytes:
         """What a restarted ingest goes on from; at most `snapshot.SNAPSHOT_LIMIT` bytes, and cheap."""
-        return pack_count(self._state, self.counters) + self._rest
+        return pack_count(self._state, self.counters) + self._rest + self._clock
 
     def _packed_rest(self) -> bytes:
         return pack_rest(self._health.codes, self._notes.listed())

@@ -216,7 +216,7 @@ class Judge:
         if self._torn_count[i] > 1:
             past.append(f"torn in {self._torn_count[i]} of the last {LOOK_BACK_S} s")
         if self._step_count[i] >= 1:
-            past.append(f"{STEP_DB:.0f} dB or more off its usual level in {self._step_count[i]} of them")
+            past.append(f"{STEP_DB:.0f} dB or more off its usual level in {self._step_count[i]} of {LOOK_BACK_S} s")
         return "; ".join([now, *past] if now else past) or f"was torn; whole again for less than {CALM_S} s"
 
     def _torn_now(self, i: int, second: Second) -> str:

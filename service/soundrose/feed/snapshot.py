@@ -1,23 +1,25 @@
 """codec: what a restarted ingest goes on from, as few bytes: run, index, counters, states, the notes in force.
 
-Two msgpack values one after the other: the count, which changes with every message, and the rest, which seldom does
-and is therefore kept packed. Written and read by this program alone, under a version of its own.
+Three msgpack values one after the other: the count, which changes with every message, the rest, which seldom does,
+and what is known of the sample clock; the last two are therefore kept packed. Written and read by this program alone,
+under a version of its own.
 """
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import asdict, fields
-from typing import Any, Final
+from typing import Any, Final, NamedTuple
 
 import msgpack
 import numpy as np
 from numpy.typing import NDArray
 
 from soundrose.errors import UsageError
+from soundrose.feed.clock import SampleClock
 from soundrose.feed.hop import Navigation, Note, Positions
 from soundrose.feed.sequence import Candidate, Counters, RunState
 from soundrose.feed.wire import REASONS
 
-__all__ = ["SNAPSHOT_LIMIT", "pack_count", "pack_rest", "snapshot_facts", "unpack_snapshot"]
+__all__ = ["SNAPSHOT_LIMIT", "Snapshot", "pack_clock", "pack_count", "pack_rest", "snapshot_facts", "unpack_snapshot"]
 
 SNAPSHOT_LIMIT: Final = 60 * 1024  #: bytes; a snapshot is never larger
 _REST_LIMIT: Final = 44 * 1024  #: bytes of the rest; beyond it the notes are left out, and come again from the source
@@ -43,6 +45,11 @@ def pack_rest(states: NDArray[np.uint8], notes: Sequence[Note]) -> bytes:
     return rest if len(rest) <= _REST_LIMIT else bytes(msgpack.packb((codes, [])))
 
 
+def pack_clock(facts: Mapping[str, Any]) -> bytes:
+    """What `SampleClock.facts` gives."""
+    return bytes(msgpack.packb(facts))
+
+
 def _plain(note: Note) -> tuple[Any, ...]:
     if isinstance(note, Positions):
         return ("positions", note.t_ns, note.positions_m.astype("<f8").tobytes())
@@ -52,12 +59,22 @@ def _plain(note: Note) -> tuple[Any, ...]:
     return ()
 
 
-def unpack_snapshot(snapshot: bytes, channels: int) -> tuple[RunState, Counters, NDArray[np.uint8], list[Note]]:
-    """State, counters, hydrophones' states (channels,) and the notes in force. UsageError if it is no snapshot."""
+class Snapshot(NamedTuple):
+    """states : (channels,) uint8, of the hydrophones.  clock : facts of the sample clock; {} before its first."""
+
+    state: RunState
+    counters: Counters
+    states: NDArray[np.uint8]
+    notes: list[Note]
+    clock: dict[str, Any]
+
+
+def unpack_snapshot(snapshot: bytes, channels: int) -> Snapshot:
+    """Read it. UsageError if it is not a snapshot."""
     try:
         unpacker = msgpack.Unpacker(use_list=False)
         unpacker.feed(snapshot)
-        count, (codes, notes) = unpacker.unpack(), unpacker.unpack()
+        count, (codes, notes), clock = unpacker.unpack(), unpacker.unpack(), unpacker.unpack()
         version, running, run, epoch, following, first, t_ns, stretch, ended, replaced, candidate, *counts = count
         if version != _VERSION:
             raise UsageError(f"the snapshot has version {version!r}; this program reads {_VERSION}")
@@ -68,7 +85,7 @@ def unpack_snapshot(snapshot: bytes, channels: int) -> tuple[RunState, Counters,
         counters = Counters(**dict(zip(_COUNTED, counts, strict=True)))
         counters.dropped = dict(zip(REASONS, counts[-1], strict=True))
         states = np.frombuffer(codes, np.uint8, count=channels)
-        return state, counters, states, [_note(note) for note in notes]
+        return Snapshot(state, counters, states, [_note(note) for note in notes], dict(clock))
     except (ValueError, TypeError, LookupError, msgpack.UnpackException) as error:
         if isinstance(error, UsageError):
             raise
@@ -76,15 +93,15 @@ def unpack_snapshot(snapshot: bytes, channels: int) -> tuple[RunState, Counters,
 
 
 def snapshot_facts(snapshot: bytes) -> dict[str, Any]:
-    """Of a snapshot what the status message says: `run` and `next` (None while waiting), every counter.
+    """Of a snapshot what the status message says: `run` and `next` (None while waiting), every counter, `clock`.
 
     An empty snapshot is that of a feed that has not begun. UsageError if it is not a snapshot.
     """
-    state, counters = RunState(), Counters()
+    state, counters, clock = RunState(), Counters(), SampleClock(1.0).facts()
     if snapshot:
-        state, counters, _, _ = unpack_snapshot(snapshot, 0)
+        state, counters, _, _, clock = unpack_snapshot(snapshot, 0)
     run, following = (state.run, state.next) if state.running else (None, None)
-    return {"run": run, "next": following, **asdict(counters)}
+    return {"run": run, "next": following, **asdict(counters), "clock": clock}
 
 
 def _note(plain: tuple[Any, ...]) -> Note:
