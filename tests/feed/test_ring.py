@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from soundrose.feed.hop import Hop, Navigation
+from soundrose.feed.hop import Hop, Navigation, Pulse
 from soundrose.feed.ring import MAX_NOTES, WINDOW_HOLD, HopRing, ring_capacity
 
 
@@ -206,3 +206,30 @@ def test_unknown_band_is_refused():
     ring = HopRing(3, True, ["a"])
     with pytest.raises(KeyError):
         ring.join("b", "s", ())
+
+
+def test_band_that_comes_again_in_hold_is_given_the_notes_of_its_hops_once_more():
+    """A pulse is not among the notes in force: it must not be lost with the process that had it."""
+    ring = HopRing(4, True, ["a"])
+    ring.join("a", "s", ())
+    ring.add_note(note(1))
+    ring.add_hop(hop(0))
+    ring.take("a")
+    ring.acknowledge("a", 1)
+    pulse = Pulse(5, "gun", 0.2)
+    ring.add_note(pulse)
+    ring.add_hop(hop(1))
+    assert ring.take("a").notes == (pulse,)
+    ring.join("a", "t", ())
+    given = ring.take("a")
+    assert (given.hop.first, given.notes) == (4, (pulse,))
+
+
+def test_band_that_joins_is_given_a_pulse_that_stands_before_its_first_hop():
+    ring = HopRing(4, False, ["a"])
+    ring.add_hop(hop(0))
+    pulse = Pulse(5, "gun", 0.2)
+    ring.add_note(pulse)
+    ring.join("a", "s", ())
+    ring.add_hop(hop(1))
+    assert ring.take("a").notes == (pulse,)

@@ -101,7 +101,8 @@ class HopRing:
         start = band.acknowledged if self._hold and known else self._end
         band.first_missed += start - band.acknowledged if known else 0
         band.session, band.cursor, band.acknowledged = session, start, start
-        band.note = self._first_note + len(self._notes)
+        earlier = sum(before < start for before, _ in self._notes)  # the others stand before hops it is yet to get
+        band.note = self._first_note + earlier
         band.waiting = tuple(in_force)
         band.given.clear()
         band.taken = 0
