@@ -31,7 +31,7 @@ _TICK_MS = 50
 _BEATS = 1000  #: taken in one turn at most: who sends without end does not keep the loop from its other work
 _BEAT_BYTES = 2**20
 _STATUS_S = 1.0
-_END_S = 4.0  #: contract: an orderly end within 5 s
+_END_S = 3.5  #: contract: an orderly end within 5 s; the interpreter itself takes half a second to go
 _PAUSE_S = 1.0  #: a turn longer than this: this process itself was held up, and no child is to blame
 _READERS = ("contacts", "serve")  #: subscribe to what is published, so they start once its address is known
 _GIVE_UP = 5  #: failures in a row of one child before the service was ever ready
@@ -86,7 +86,7 @@ class Supervisor:
         finally:
             self._systemd.stopping()
             self._end_children()
-            self._publisher.close()
+            self._publisher.close(0)  # the proxy has ended: nothing travels any more
             self._control.close()
             self._context.term()
             self._record.close()

@@ -62,5 +62,6 @@ class Publisher:
                 if self._waiting is None or time.monotonic() > until or not self._waiting():
                     return  # `seq` shows the hole
 
-    def close(self) -> None:
-        self._socket.close()
+    def close(self, linger_ms: int | None = None) -> None:
+        """linger_ms : how long what was sent may still travel; half a second if not given."""
+        self._socket.close(linger_ms)
