@@ -39,6 +39,7 @@ def one(name: str, file: str, old: str, new: str, *tests: str) -> Mutant:
 WAVES, RULES, HOSTILE = "test_plane_waves.py", "test_feed_rules.py", "test_hostile_feed.py"
 NOTES, HOLD, LOAD = "test_notes.py", "test_hold.py", "test_overload.py"
 SERVED, FAULTS = "test_served_maps.py", "test_faults.py"
+HEALTH, CLOCK = "test_health_states.py", "test_sample_clock.py"
 
 MUTANTS = (
     one("mirrored cone", "beam/steering.py", "tau = np.multiply.outer(self.cos[beams],",
@@ -109,6 +110,28 @@ MUTANTS = (
         "if False and not new_run:", FAULTS),
     one("count not kept over a restart of ingest", "feed/process.py",
         "Intake(settings, self._record.read() or None)", "Intake(settings, None)", FAULTS),
+    one("health: polarity never turned", "feed/phase.py", "(sign < 0) & (score < -least)", "(sign < -1)",
+        HEALTH, "-k", "named"),
+    one("health: mirrored places", "feed/phase.py", "for way, other in ((step, 0), (-step, 1)):",
+        "for way, other in ((step, 1), (-step, 0)):", HEALTH, "-k", "named"),
+    one("health: phases not kept whole", "feed/spectra.py", "kept = spectra[:, self._bins]",
+        "kept = np.abs(spectra[:, self._bins])", HEALTH, "-k", "named"),
+    one("health: compared with itself", "feed/levels.py", "ambient = np.median(level[:, near], axis=2)",
+        "ambient = level", HEALTH, "-k", "named"),
+    one("health: compared with the loudest neighbour", "feed/levels.py", "ambient = np.median(level[:, near], axis=2)",
+        "ambient = np.max(level[:, near], axis=2)", HEALTH, "-k", "named"),
+    one("health: steps not remembered", "feed/latch.py", "self._at = (self._at + 1) % len(self._marks)",
+        "self._at = 0", HEALTH, "-k", "named"),
+    one("health: exclusion does not win", "feed/judge.py", "codes[conditions[code]] = code",
+        "codes[conditions[max(code, 1)]] = max(code, 1)", HEALTH, "-k", "excluded"),
+    one("health: the sick stay in use", "feed/judge.py", "| self._noisy.on\n", "\n", HEALTH, "-k", "named"),
+    one("health: one second is enough for noise", "feed/judge.py", "ABOVE_DB: Final = 6.0", "ABOVE_DB: Final = 0.6",
+        HEALTH, "-k", "meanwhile or long_watch"),
+    one("clock: drift of the other sign", "feed/clock.py", "t_ns - self._t_ns - nominal_ns",
+        "nominal_ns - t_ns + self._t_ns", CLOCK),
+    one("clock: slopes over the whole span for the half", "feed/clock.py", "(x[-half:] - x[:half])",
+        "(x[-1] - x[0])", CLOCK),
+    one("clock: jumps not seen", "feed/clock.py", "STEP_MS: Final = 5.0", "STEP_MS: Final = 500.0", CLOCK),
 )  # fmt: skip
 
 
