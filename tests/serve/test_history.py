@@ -90,10 +90,8 @@ def test_a_cursor_goes_on_where_the_last_answer_ended(fresh: Served) -> None:
     put(fresh, maps(21))
     seen: list[int] = []
     cursor = ""
-    while True:
+    for _ in range(5):
         found = fresh.get(f"/api/v1/history?limit=3{cursor}").json()
-        if not found["t_end"]:
-            break
         seen += found["t_end"]
         cursor = f"&since={found['next']}"
     assert seen == [EDGE + (2 * k + 2) * HOP for k in range(10)]
