@@ -12,7 +12,8 @@ def test_demo_says_where_to_look_hears_the_passing_ship_and_ends_by_itself():
     done = subprocess.run([*DEMO, "--seconds", "6"], capture_output=True, text=True, timeout=100)
     assert done.returncode == 0, done.stdout + done.stderr
     assert re.match(r"\s*http://127\.0\.0\.1:\d+/\s", done.stdout), done.stdout  # first of all
-    (loudest, ship) = re.search(r"away from own ship: ([\d.]+)°; truly there: .*Tindvik ([\d.]+)°", done.stdout).groups()
+    seen = re.search(r"away from own ship: ([\d.]+)°; truly there: .*Tindvik ([\d.]+)°", done.stdout)
+    (loudest, ship) = seen.groups()
     assert abs(float(loudest) - float(ship)) <= 3.0, done.stdout  # two beams of the grid there
     (maps, missed) = re.search(r"(\d+) maps; missed (\d+)", done.stdout).groups()
     assert int(maps) >= 10

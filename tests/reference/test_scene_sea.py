@@ -1,13 +1,13 @@
-"""The sea of a scene against published values: absorption and ambient noise. Each value names its source and standing."""
+"""The sea of a scene against published values: absorption and ambient noise. Each names its source and standing."""
 
 import numpy as np
 import pytest
 
 from soundrose.scene.sea import ainslie_mccolm, ambient_db, francois_garrison, wenz_parts_db
 
-#: temperature, salinity, depth, pH, kHz, Francois-Garrison, Ainslie-McColm, dB/km. Both formulas recomputed in float and
-#: with many digits from their printed coefficients (standing: recomputed); Francois and Garrison 1982, JASA 72(3) 896-907
-#: and 72(6) 1879-1890; Ainslie and McColm 1998, JASA 103(3) 1671-1672
+#: temperature, salinity, depth, pH, kHz, Francois-Garrison, Ainslie-McColm, dB/km. Both formulas recomputed in float
+#: and with many digits from their printed coefficients (standing: recomputed); Francois and Garrison 1982, JASA 72(3)
+#: 896-907 and 72(6) 1879-1890; Ainslie and McColm 1998, JASA 103(3) 1671-1672
 ABSORPTION = [
     (10, 35, 0, 8, 0.1, 0.001007027638, 0.001006202732),
     (10, 35, 0, 8, 1, 0.06012606339, 0.06132347521),
@@ -55,7 +55,7 @@ def test_absorption_agrees_with_a_printed_example():
 
 
 def test_boric_acid_relaxes_at_its_published_frequency():
-    """1.116515471 kHz at 10 °C, S 35 (Francois and Garrison 1982; standing: recomputed). Only the boric part follows pH,
+    """1.116515471 kHz at 10 °C, S 35 (Francois and Garrison 1982; standing: recomputed). Only the boric part knows pH,
     so a change of pH shows it alone: at its own frequency it has half of what it has far above."""
     f = np.array([1116.515471, 1e7])
     boric = francois_garrison(f, 10, 35, 0, 8.3) - francois_garrison(f, 10, 35, 0, 8.0)

@@ -7,10 +7,10 @@ import numpy as np
 import pytest
 
 sys.path.insert(0, str(Path(__file__).parent.parent / "scene"))
-from small_scene import RATE, SPEED, click, contact, level_db, small_scene  # noqa: E402
+from small_scene import RATE, SPEED, click, contact, level_db, small_scene
 
-from soundrose.scene.engine import Sea  # noqa: E402
-from soundrose.scene.sea import francois_garrison  # noqa: E402
+from soundrose.scene.engine import Sea
+from soundrose.scene.sea import francois_garrison
 
 
 def fine_peak(samples, near, width=24):

@@ -1,4 +1,4 @@
-"""The whole sea: the same bytes for the same seed, however it is cut; parts that add up; constant memory; exact delays."""
+"""The whole sea: the same bytes for the same seed, however it is cut; parts that add up; constant memory; delays."""
 
 import tracemalloc
 
@@ -20,7 +20,7 @@ def full_scene(**tables):
         "legs": [{"seconds": 1.0}, {"seconds": 60.0, "turn_deg_s": 1.0}],
         "sources": [
             {"name": "hull", "depth_m": 4.0, "bounces": 2, "level_db": 120.0, "modulation": 0.4},
-            {"name": "gun", "kind": "gun", "level_db": 190.0, "first_s": 0.2, "interval_s": [0.8, 1.2], "announce": True},
+            {"name": "gun", "kind": "gun", "level_db": 190.0, "first_s": 0.2, "interval_s": [0.8, 1.2]},
         ],
         "reverberation": {"source": "gun", "level_db": 110.0, "decay_db": 30.0},
     }  # fmt: skip
@@ -29,8 +29,8 @@ def full_scene(**tables):
         contact(name="caller", kind="animal", level_db=None, tones=None, calls=CALLS, interval_s=[0.2, 0.6]),
     ]
     plain = {
-        "own": own, "contacts": contacts, "ambient": {"enabled": True, "electronic_db": 30.0}, "flow": {"level_db": 90.0},
-        "hum": {"tones": [[50.0, 90.0]]}, "strum": {"tones": [[20.0, 100.0]]},
+        "own": own, "contacts": contacts, "ambient": {"enabled": True, "electronic_db": 30.0},
+        "flow": {"level_db": 90.0}, "hum": {"tones": [[50.0, 90.0]]}, "strum": {"tones": [[20.0, 100.0]]},
     }  # fmt: skip
     return small_scene(**(plain | tables))
 
@@ -112,7 +112,7 @@ def test_delays_are_exact_within_the_fade_between_knots(distance, hertz):
 
 def test_a_channel_that_is_sampled_late_hears_what_comes_later():
     late = [0.0, 1.0e-4, 0, 0, 0, 0, 0, -2.0e-4]
-    still = dict(contacts=[contact(range_m=20_000.0, bearing_deg=90.0)])
+    still = {"contacts": [contact(range_m=20_000.0, bearing_deg=90.0)]}
     plain = Sea(small_scene(**still)).read(RATE)
     skewed = Sea(small_scene(calibration={"delay_s": late}, **still)).read(RATE)
     for m, delay in enumerate(late):

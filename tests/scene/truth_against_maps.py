@@ -214,7 +214,8 @@ def summary(report):
         rows.append({
             "band": band, "contact": contact, "checks": len(mine), "peaks": len(peaks),
             "level_rms_db": float(np.sqrt((level**2).mean())), "level_worst_db": float(np.abs(level).max()),
-            "bearing_rms_widths": float(np.sqrt((widths**2).mean())), "bearing_worst_widths": float(np.abs(widths).max()),
+            "bearing_rms_widths": float(np.sqrt((widths**2).mean())),
+            "bearing_worst_widths": float(np.abs(widths).max()),
             "geometry_rms_widths": float(np.sqrt(np.mean([f.from_geometry**2 for f in peaks] or [0]))),
             "over_half_db": int((np.abs(level) > 0.5).sum()), "over_a_tenth": int((np.abs(widths) > 0.1).sum()),
         })  # fmt: skip
@@ -237,12 +238,14 @@ def main():
         print(json.dumps(row))
     for name, f in sorted({line[:2] for line in report.lines}):
         mine = np.array([line[2:] for line in report.lines if line[:2] == (name, f)])
-        print(f"{name} {f:g} Hz: {len(mine)} averages; peak true {mine[:, 0].mean():.1f} deg, measured {mine[:, 1].mean():.1f};"
+        print(f"{name} {f:g} Hz: {len(mine)} averages; peak true {mine[:, 0].mean():.1f} deg,"
+              f" measured {mine[:, 1].mean():.1f};"
               f" level {mine[:, 2].mean():+.2f} dB; pattern over beams within {mine[:, 3].max():.2f} dB")  # fmt: skip
     found = [b for b in report.bounce if b[2] is not None]
     if found:
         away = np.array([b[3] for b in found])
-        print(f"bounce: {len(found)} of {len(report.bounce)} checks with a peak; true {found[0][1]:.1f}..{found[-1][1]:.1f} deg;"
+        print(f"bounce: {len(found)} of {len(report.bounce)} checks with a peak;"
+              f" true {found[0][1]:.1f}..{found[-1][1]:.1f} deg;"
               f" off by {np.abs(away).max():.3f} widths at most, rms {np.sqrt((away**2).mean()):.3f}")  # fmt: skip
     print(f"{report.maps} maps")
     bad = [f for f in report.findings if abs(f.level_db) > 0.5 or abs(f.widths or 0) > 0.1]

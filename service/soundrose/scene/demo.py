@@ -170,7 +170,7 @@ def _newest_truth(path: Path) -> Mapping[str, Any] | None:
 
 
 class _View:
-    """The newest map and status, and how they are shown: one line or a picture in a terminal, a line a second elsewhere."""
+    """The newest map and status, and how to show them: a line or a picture in a terminal, a line a second elsewhere."""
 
     def __init__(self, ready: Mapping[str, str], picture: bool, console: Console) -> None:
         self.maps = 0

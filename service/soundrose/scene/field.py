@@ -22,7 +22,7 @@ def coherence(shape: AmbientShape, k_rad_m: Floats, positions_m: Floats) -> Floa
     """(bins, channels, channels) coherence between hydrophones.
 
     shape : "isotropic", sin(kd)/(kd), or "surface", 2 J1(kd)/(kd): sources near the surface, each a vertical dipole,
-    for hydrophones at one depth (their z is not looked at).  k_rad_m : (bins,) wavenumbers.  positions_m : (channels, 3).
+    for hydrophones at one depth (z is not looked at).  k_rad_m : (bins,) wavenumbers.  positions_m : (channels, 3).
 
     References
     ----------
@@ -58,7 +58,7 @@ def flow_covariance(flow: Flow, speed_m_s: float, frequency_hz: Floats, x_m: Flo
 
     References
     ----------
-    Corcos 1963, JASA 35(2) 192-199: exp(-a w d / U) exp(i w d / U), U the convection speed, d the distance along the flow.
+    Corcos 1963, JASA 35(2) 192-199: exp(-a w d / U) exp(i w d / U), U the convection speed, d along the flow.
     """
     convection = flow.convection * speed_m_s
     omega = 2 * np.pi * frequency_hz[:, None, None]

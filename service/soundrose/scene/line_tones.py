@@ -59,7 +59,7 @@ def _amplitude(level_db: float) -> float:
 
 
 def add_tones(made: NDArray[np.float32], tones: Sequence[Tones], first: int, step: int, rate_hz: float) -> None:
-    """Adds tones to (channels, n) samples from index `first` on, IN PLACE; n is a multiple of `step`, from knot to knot."""
+    """Adds tones to (channels, n) samples from index `first` on, IN PLACE; n is a multiple of `step`."""
     rise = np.arange(step) / step
     for begin in range(0, made.shape[1], step):
         t = (first + begin + np.arange(step)) / rate_hz

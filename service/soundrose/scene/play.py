@@ -31,7 +31,7 @@ class ScenePlay:
 def play_scene(
     recorder: Recorder, block: int, how: ScenePlay, address: str, sent: Sent, report: Callable[[Sent], None]
 ) -> None:
-    """Sends the whole scene; `sent` is kept up to date and `report` gets it after each block. Interrupted, it says `end`.
+    """Sends the scene; `sent` is kept up to date and `report` gets it after each block. Interrupted, it says end.
 
     UsageError : no such address.  StreamError : nothing takes the samples.
     """

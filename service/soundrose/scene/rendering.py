@@ -98,7 +98,12 @@ class _Source:
         self._held = np.zeros((len(bounces), 0), np.float32)
         u = np.arange(steps.step) / steps.step
         self._cubic = np.stack(  # Lagrange, knots -1, 0, 1, 2
-            [-u * (u - 1) * (u - 2) / 6, (u + 1) * (u - 1) * (u - 2) / 2, -(u + 1) * u * (u - 2) / 2, (u + 1) * u * (u - 1) / 6]
+            [
+                -u * (u - 1) * (u - 2) / 6,
+                (u + 1) * (u - 1) * (u - 2) / 2,
+                -(u + 1) * u * (u - 2) / 2,
+                (u + 1) * u * (u - 1) / 6,
+            ]
         )  # fmt: skip
 
     def frames(self, knot: int) -> NDArray[np.complex64] | None:
@@ -134,7 +139,7 @@ class _Source:
         return np.stack(made)
 
     def weights(self, knot: int) -> tuple[Floats, Floats, NDArray[np.float32]]:
-        """At KNOTS knots from `knot` on: delay against the origin, samples, and amplitude, both (ways, KNOTS, channels);
+        """At KNOTS knots from `knot` on: delay against the origin, samples, and amplitude (ways, KNOTS, channels);
         absorption (ways, KNOTS, bins)."""
         t = np.arange(knot, knot + KNOTS) * self._steps.step / self._steps.rate_hz
         arrival = arrivals(self.emitter, self._line, self._water, t)

@@ -31,8 +31,8 @@ from soundrose.settings_reader import Notes, Table, shown
 __all__ = ["parse_scene"]
 
 TABLES = (
-    "name", "seed", "array", "feed", "calibration", "water", "own", "ambient", "flow", "hum", "strum", "contacts", "faults",
-    "gaps", "clock", "navigation",
+    "name", "seed", "array", "feed", "calibration", "water", "own", "ambient", "flow", "hum", "strum", "contacts",
+    "faults", "gaps", "clock", "navigation",
 )  # fmt: skip
 LEAST_RATE_HZ, MOST_RATE_HZ = 1000.0, 400_000.0
 NOT_NEGATIVE = "must be a number, 0 or more"

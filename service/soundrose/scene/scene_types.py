@@ -130,7 +130,7 @@ Shape: TypeAlias = Sweep | Pulse | Clicks | Shot
 
 @dataclass(frozen=True, slots=True)
 class Schedule:
-    """When a source sounds: first at first_s, then after each interval; in bouts with silences where those are given."""
+    """When a source sounds: first at first_s, then after each interval; in bouts with silences if those are given."""
 
     first_s: float
     interval_s: Range

@@ -20,7 +20,7 @@ def francois_garrison(
 
     References
     ----------
-    Francois and Garrison 1982, JASA 72(3) 896-907 and 72(6) 1879-1890; 273 is added to the temperature as printed there.
+    Francois and Garrison 1982, JASA 72(3) 896-907 and 72(6) 1879-1890; 273 is added to the temperature as there.
     """
     f = np.asarray(frequency_hz, np.float64) / 1000
     t, kelvin = temperature_c, temperature_c + 273

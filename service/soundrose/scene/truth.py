@@ -103,7 +103,7 @@ class Truth:
 def band_levels(
     scene: Scene, emitter: Emitter, distance_m: float, bands: list[tuple[float, float, float]]
 ) -> list[float | None]:
-    """Level of a ship in each band, dB re 1 µPa m: spectrum and tones after absorption over a distance, no spreading."""
+    """Level of a ship in each band, dB re 1 µPa m: spectrum and tones, absorbed over a distance but not spread."""
     assert isinstance(emitter.sound, Motor)
     motor, levels = emitter.sound, []
     depth = (emitter.depth_m + scene.own.array_depth_m) / 2
