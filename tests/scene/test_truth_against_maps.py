@@ -33,8 +33,8 @@ def test_maps_of_the_demo_show_what_is_there():
 
 
 def test_hum_and_strum_are_where_their_waves_say():
-    """Hum: the same everywhere, so its peak is at 90 deg. Strum of 68.4 Hz at 42 m/s on hydrophones 0.6 m apart: it
-    turns by 0.977 cycles from one to the next, which looks like -0.023 cycles: cos = -0.023 * 1486 / (0.6 * 68.4) = -0.83."""
+    """Hum: the same everywhere, so its peak is at 90 deg. Strum of 68.4 Hz at 42 m/s on hydrophones 0.6 m apart turns
+    by 0.977 cycles from one to the next, which looks like -0.023: cos = -0.023 * 1486 / (0.6 * 68.4) = -0.83."""
     scene = load_scene(shipped("demo.toml"))
     quiet = replace(scene, emitters=(), faults=(), gaps=(), strum=replace(scene.strum, decay_m=1000.0))
     settings = load_settings(shipped("demo-settings.toml"))
