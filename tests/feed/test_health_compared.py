@@ -243,6 +243,46 @@ def test_states_go_on_after_a_restart_until_judged_again(settings):
     assert "hydrophone 15" in why(told[-1], 14)
 
 
+def test_cable_without_its_hydrophone_stays_dead_over_a_restart(settings):
+    values = sea(14)
+    values[6] *= 0.01
+    half = int(7 * RATE)
+    watch = Watch(Intake(settings))
+    watch.push(values[:, :half])
+    again = Watch(Intake(settings, watch.intake.snapshot()), half)
+    assert [sick(header) for header in again.push(values[:, half:])] == [{6: "dead"}] * 7
+
+
+@pytest.mark.parametrize("channels", [1, 2, 5])
+def test_few_hydrophones_are_judged_by_their_own_samples(settings_for, channels):
+    plain = settings_for(channels=channels, rate_hz=RATE, frames=(1024,))
+    values = sea(6)[:channels]
+    values[0] *= -0.01
+    values[-1] *= 1 if channels > 1 else 100
+    header = Watch(Intake(plain)).push(values)[-1]
+    assert sick(header) == ({0: "dead"} if channels == 5 else {})
+
+
+@pytest.mark.parametrize("places", ["far apart", "ring", "one point"])
+def test_other_shapes_accuse_nobody_and_tell_what_they_can(settings_for, places):
+    """25 m apart no bin is low enough; on a ring polarity is told; on one point too."""
+    plain = settings_for(channels=CHANNELS, rate_hz=RATE, frames=(1024,))
+    turn = 2 * np.pi * np.arange(CHANNELS) / CHANNELS
+    size = {"far apart": 100.0, "ring": 2.0, "one point": 0.0}[places]
+    xy = size * np.stack([np.cos(turn), np.sin(turn)], axis=1)
+    rng, n = np.random.default_rng(3), int(7 * RATE)
+    f = np.fft.rfftfreq(n, 1 / RATE)
+    values = 0.02 * rng.standard_normal((CHANNELS, n))
+    for way in 2 * np.pi * np.arange(48) / 48:
+        wave = rng.standard_normal((len(f), 2)).view(complex)[:, 0] * np.sqrt(n / 96)
+        ahead_s = xy @ [np.cos(way), np.sin(way)] / C
+        values += np.fft.irfft(wave * np.exp(2j * np.pi * np.outer(ahead_s, f)), n)
+    values[6] *= -1
+    settings = replace(plain, array=replace(plain.array, positions_m=tuple((x, y, 0.0) for x, y in xy.tolist())))
+    header = Watch(Intake(settings)).push(values)[-1]
+    assert sick(header) == ({} if places == "far apart" else {6: "reversed"})
+
+
 def test_states_are_those_of_the_contract_in_its_order():
     order = ("excluded", "dead", "clipped", "exchanged", "reversed", "noisy", "intermittent", "weak", "good")
     assert STATES[:-1] == order

@@ -125,8 +125,11 @@ MUTANTS = (
     one("health: exclusion does not win", "feed/judge.py", "codes[conditions[code]] = code",
         "codes[conditions[max(code, 1)]] = max(code, 1)", HEALTH, "-k", "excluded"),
     one("health: the sick stay in use", "feed/judge.py", "| self._noisy.on\n", "\n", HEALTH, "-k", "named"),
-    one("health: one second is enough for noise", "feed/judge.py", "ABOVE_DB: Final = 6.0", "ABOVE_DB: Final = 0.6",
-        HEALTH, "-k", "meanwhile or long_watch"),
+    Mutant("health: a hardly better place is enough", (
+        ("feed/phase.py", "BETTER: Final = 0.5", "BETTER: Final = 1.1"),
+        ("feed/phase.py", "BETTER_EACH: Final = 0.7", "BETTER_EACH: Final = 1.5"),
+        ("feed/phase.py", "EXPLAINED: Final = 0.5", "EXPLAINED: Final = 9.0"),
+    ), (HEALTH, "-k", "meanwhile or long_watch")),
     one("clock: drift of the other sign", "feed/clock.py", "t_ns - self._t_ns - nominal_ns",
         "nominal_ns - t_ns + self._t_ns", CLOCK),
     one("clock: slopes over the whole span for the half", "feed/clock.py", "(x[-half:] - x[:half])",

@@ -103,6 +103,7 @@ class Judge:
         self.codes = np.where(self._excluded, STATES.index("excluded"), codes).astype(np.uint8)
         self._dead = self._is("dead")
         for state, latch in (
+            ("dead", self._silent),
             ("clipped", self._clipped), ("exchanged", self._exchanged), ("reversed", self._reversed),
             ("noisy", self._noisy), ("intermittent", self._recurring), ("weak", self._weak),
         ):  # fmt: skip
@@ -141,6 +142,7 @@ class Judge:
         comes_back = (self._torn_count >= RECURS) & self._torn | (self._step_count >= STEPS) & off
         self._recurring.push(comes_back & ~self._dead, whole)
         if excess is None or not excess.told.any():
+            self._silent.push(np.zeros(len(whole), bool), whole)  # nothing to compare with: its own samples decide
             return
         judged, db = excess.judged & ~self._torn, excess.bands_db[:, excess.told]
         third, most = max(-(-db.shape[1] // 3), 1), db.shape[1] // 2 + 1

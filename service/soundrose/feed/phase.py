@@ -138,9 +138,9 @@ class _Stretch:
         self._seconds += 1
         self._seen = np.where(fit[here], self._seen + 1, 0)
         ours = np.ascontiguousarray(phases[:, :, here].transpose(1, 2, 0))
-        now = ours @ ours.conj().transpose(0, 2, 1)
         gain = 1.0 / min(self._seconds, MEMORY_S)
-        self._mean += np.float32(gain) * (now / np.float32(phases.shape[0]) - self._mean)
+        self._mean *= np.float32(1.0 - gain)
+        self._mean += (ours * np.float32(gain / phases.shape[0])) @ ours.conj().transpose(0, 2, 1)
         known = self._seen >= LEAST_S
         misfit, nothing = self._misfits(known)
         self._decide(misfit, nothing, known, out)
