@@ -126,12 +126,12 @@ def test_the_demo_is_found_by_its_name(service):
     assert came[-1]["kind"] == "end"
 
 
-def test_sighting_takes_the_loudest_beam_away_from_own_ship():
+def test_sighting_takes_the_loudest_peak_away_from_own_ship():
     import numpy as np
 
     level = np.full((4, 5), 60.0, np.float32)
-    level[0], level[2] = 90.0, 70.0  # own ship, and another
+    level[0], level[1], level[2], level[3, 0] = 90.0, 66.0, 70.0, 100.0  # own ship, another, and a low tone
     truth = {"contacts": [{"name": "b", "cone_deg": 88.0}, {"name": "a", "cone_deg": 1.0}]}
-    seen = sighting(level, np.array([0.0, 45.0, 90.0, 135.0]), truth)
+    seen = sighting(level, np.array([0.0, 45.0, 90.0, 135.0]), np.arange(1.0, 6.0), truth)
     assert (seen.cone_deg, seen.level_db) == (90.0, pytest.approx(70.0, abs=1e-5))
     assert seen.text == "loudest away from own ship: 90.0°; truly there: a 1.0°, b 88.0°"

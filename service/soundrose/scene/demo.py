@@ -35,8 +35,9 @@ PR_SET_PDEATHSIG = 1
 
 
 def demo(seconds: float | None = None, port: int = 8080, picture: bool = False, console: Console | None = None) -> int:
-    """Runs until `seconds` are over, Ctrl-C or SIGTERM; prints what was seen. Exit status 0, 1 if no map came.
+    """Runs for `seconds` from the first map on, or until Ctrl-C or SIGTERM; prints what was seen.
 
+    Returns the exit status: 0, or 1 if no map came.
     port : of HTTP; 0 takes any free port for everything.  picture : the map in this terminal, not only a line.
     StartError: the service did not start.
     """
@@ -152,11 +153,11 @@ def _end(process: "subprocess.Popen[bytes]", number: int) -> None:
 
 def _watch(ready: Mapping[str, str], truth: Path, seconds: float | None, picture: bool, console: Console) -> int:
     """Shows what comes until the time is over; prints what was seen."""
-    until = time.monotonic() + seconds if seconds is not None else float("inf")
     view = _View(ready, picture, console)
     with Subscriber(ready["publish"], [f"map/{BAND}", "status"]) as subscriber:
         try:
-            view.follow(subscriber, until)
+            view.follow(subscriber, time.monotonic() + READY_S, until_map=True)
+            view.follow(subscriber, float("inf") if seconds is None else time.monotonic() + seconds)
         except KeyboardInterrupt:
             pass
         _print_summary(view, _newest_truth(truth), subscriber, console)
@@ -179,9 +180,9 @@ class _View:
         self._status: Message | None = None
         self._due = 0.0
 
-    def follow(self, subscriber: Subscriber, until: float) -> None:
-        with Live(console=self._console, auto_refresh=False, transient=False) as live:
-            while (now := time.monotonic()) < until:
+    def follow(self, subscriber: Subscriber, until: float, until_map: bool = False) -> None:
+        with Live(console=self._console, auto_refresh=False, transient=until_map) as live:
+            while (now := time.monotonic()) < until and not (until_map and self.maps):
                 try:
                     self._take(subscriber.receive(min(DRAW_S, until - now)))
                 except ReceiveTimeout:
@@ -235,6 +236,6 @@ def _print_summary(view: _View, truth: Mapping[str, Any] | None, subscriber: Sub
     )
     if view.newest is not None and truth is not None:
         m = view.newest
-        seen: Sighting = sighting(m.level_db, m.cone_deg, truth)
+        seen: Sighting = sighting(m.level_db, m.cone_deg, m.frequency_hz, truth)
         console.print(f"  {seen.text}", highlight=False, soft_wrap=True)
     console.print("Not a navigation or collision-avoidance aid; a line array cannot tell port from starboard.")
