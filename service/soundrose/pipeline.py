@@ -3,9 +3,8 @@
 from collections.abc import Iterable, Iterator, Sequence
 
 from soundrose.beam.stage import BandStage
-from soundrose.feed.intake import Intake
-
 from soundrose.feed.hop import Hop, RunEnd
+from soundrose.feed.intake import Intake
 from soundrose.product.messages import HealthProduct, Product
 from soundrose.settings_types import Settings
 
