@@ -43,7 +43,9 @@ def test_bytes_do_not_depend_on_the_block():
 
 
 def test_a_gap_leaves_out_its_samples_and_no_others():
-    scene = small_scene(gaps=[{"at_s": 0.51, "length_s": 0.3}, {"at_s": 0.7, "length_s": 0.25}])
+    scene = small_scene(
+        gaps=[{"at_s": at, "length_s": length} for at, length in ((0.51, 0.3), (0.55, 0.01), (0.7, 0.25))]
+    )
     samples = of(Samples, decoded(scene))
     taken = np.concatenate([np.arange(s.first, s.first + s.samples) for s in samples])
     away = np.setdiff1d(np.arange(2 * RATE), taken)

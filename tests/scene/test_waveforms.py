@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 from small_scene import level_db
 
+from soundrose.scene.field import FieldNoise
 from soundrose.scene.scene_types import Clicks, Events, Motor, Pulse, Schedule, Shot, Sweep
 from soundrose.scene.waveforms import LOT, Timetable, WaveformBuffer, motor_density, shape_samples, waveform
 
@@ -131,3 +132,15 @@ def test_buffer_holds_what_is_in_use_and_no_more():
         assert first <= k * 3000 - 7000
         assert first + len(samples) >= k * 3000 + 2000
         assert len(samples) <= 5 * LOT
+
+
+def test_noise_of_a_field_has_no_seams():
+    """In pieces as in one, and as loud beside a seam as between."""
+    covariance = np.ones((65, 1, 1)) * 1e6
+    whole = FieldNoise(covariance, RATE, np.zeros(1), (1, 0)).make(0, 4000)
+    pieces = FieldNoise(covariance, RATE, np.zeros(1), (1, 0))
+    parts = [pieces.make(k, 2) for k in range(0, 4000, 2)]
+    assert np.array_equal(np.concatenate(parts, axis=1), whole)
+    assert np.array_equal(FieldNoise(covariance, RATE, np.zeros(1), (1, 0)).make(1000, 2), parts[500])
+    power = (whole.reshape(-1, 128).astype(float) ** 2).mean(axis=0).reshape(16, 8).mean(axis=1)
+    assert 10 * np.log10(power / power.mean()) == pytest.approx(np.zeros(16), abs=0.25)  # 16000 values each: 0.05 dB
