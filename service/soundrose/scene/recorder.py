@@ -84,7 +84,7 @@ class Recorder:
                 continue
             if begin > at:
                 kept.append((at, begin))
-            at = max(at, stop)
+            at = stop
         if at < end:
             kept.append((at, end))
         return kept
