@@ -31,6 +31,9 @@ REACH: Final = 3  #: places on either side
 BETTER: Final = 0.5  #: misfit in the other's place over that in the own, for the two together
 BETTER_EACH: Final = 0.7  #: and for each of them
 EXPLAINED: Final = 0.5  #: misfit in the other's place over that of a signal with nothing in common with its neighbours
+#: share of the misfit of a stranger below which a signal fits its place. A wave from broadside reads the same at every
+#: hydrophone: each then fits every place, and which of them best is a matter of rounding
+FITS: Final = 0.1
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
@@ -171,6 +174,7 @@ class _Stretch:
         own = np.diagonal(misfit)
         each = misfit / np.maximum(own[:, None], 1e-12)
         each[misfit >= EXPLAINED * nothing] = np.inf
+        each[own < FITS * np.diagonal(nothing)] = np.inf  # it fits where it is, however well it may fit elsewhere too
         together = (misfit + misfit.T) / np.maximum(own[:, None] + own, 1e-12)
         together[each >= BETTER_EACH] = np.inf
         together[each.T >= BETTER_EACH] = np.inf
