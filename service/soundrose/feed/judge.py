@@ -14,11 +14,13 @@ The first that applies (`not judged` before the first second is over):
     good          none of these
 
 Intermittent comes back: torn in RECURS of the last LOOK_BACK_S seconds, or off its usual level by STEP_DB in some part
-of STEPS of them. Then it is out of use until CALM_S seconds in a row were whole. Torn once, it loses only the hops in
-which it had no readings.
+of STEPS of them, until CALM_S seconds in a row were whole. Torn once, it loses only the hops in which it had no
+readings.
 
-Out of use: excluded, dead, exchanged, reversed, noisy, intermittent that comes back. Clipped and weak ones stay: what
-they say is less good, not wrong.
+Out of use: excluded, dead, exchanged, reversed, torn again and again, and noisy by FAR_DB in a third of the octaves.
+Clipped and weak ones stay: what they say is less good, not wrong. So do those that are named for their level alone and
+less than that: a blow beside the line, or a vessel that passes close, is heard so too, and no hydrophone is left out
+for what it may have heard.
 """
 
 from typing import Final, Literal, NamedTuple, get_args
@@ -82,8 +84,9 @@ class Judge:
         self._dead = np.zeros(n, bool)
         self._silent, self._clipped = Latch(n, 2, 2), Latch(n, 1, 3)
         self._exchanged, self._reversed = Latch(n, 2, 3), Latch(n, 2, 3)
-        self._noisy, self._weak = Latch(n, 2, 5), Latch(n, 2, 5)
+        self._noisy, self._weak, self._roaring = Latch(n, 2, 5), Latch(n, 2, 5), Latch(n, 2, 5)
         self._recurring, self._torn = Latch(n, 1, CALM_S), np.zeros(n, bool)
+        self._stepping = Latch(n, 1, CALM_S)
         self._tears, self._steps = Recent(n, LOOK_BACK_S), Recent(n, LOOK_BACK_S)
         self._torn_count, self._step_count = np.zeros(n, np.int64), np.zeros(n, np.int64)
         self._partner, self._found = np.full(n, -1), ["" for _ in range(n)]
@@ -94,7 +97,7 @@ class Judge:
     def out(self) -> Bools:
         """(channels,) bool, out of use."""
         return (
-            self._excluded | self._dead | self._silent.on | self._exchanged.on | self._reversed.on | self._noisy.on
+            self._excluded | self._dead | self._silent.on | self._exchanged.on | self._reversed.on | self._roaring.on
             | self._recurring.on
         )  # fmt: skip
 
@@ -105,9 +108,10 @@ class Judge:
         for state, latch in (
             ("dead", self._silent),
             ("clipped", self._clipped), ("exchanged", self._exchanged), ("reversed", self._reversed),
-            ("noisy", self._noisy), ("intermittent", self._recurring), ("weak", self._weak),
+            ("noisy", self._noisy), ("intermittent", self._stepping), ("weak", self._weak),
         ):  # fmt: skip
             latch.resume(self._is(state))
+        self._roaring.resume(self._is("noisy"))  # left out until judged: two seconds of a roar are worse in a map
 
     def _is(self, state: str) -> Bools:
         return np.asarray(self.codes == STATES.index(state))
@@ -119,7 +123,7 @@ class Judge:
         self._from_phases(second.polarity, second.swaps)
         conditions = (
             self._excluded, self._dead | self._silent.on, self._clipped.on, self._exchanged.on, self._reversed.on,
-            self._noisy.on, self._torn | self._recurring.on, self._weak.on,
+            self._noisy.on, self._torn | self._recurring.on | self._stepping.on, self._weak.on,
         )  # fmt: skip
         codes = np.full(len(self._dead), STATES.index("good"), np.uint8)
         for code in range(len(conditions) - 1, -1, -1):
@@ -139,8 +143,8 @@ class Judge:
         off = np.zeros(len(self._dead), bool) if excess is None else excess.parts_off > 0
         whole = ~self._torn & ~off & ~self._dead
         self._step_count = self._steps.push(off & ~self._excluded)
-        comes_back = (self._torn_count >= RECURS) & self._torn | (self._step_count >= STEPS) & off
-        self._recurring.push(comes_back & ~self._dead, whole)
+        self._recurring.push((self._torn_count >= RECURS) & self._torn & ~self._dead, ~self._torn & ~self._dead)
+        self._stepping.push((self._step_count >= STEPS) & off & ~self._dead, whole)
         if excess is None or not excess.told.any():
             self._silent.push(np.zeros(len(whole), bool), whole)  # nothing to compare with: its own samples decide
             return
@@ -152,6 +156,8 @@ class Judge:
             judged & ~self._clipped.on & ((widely >= ABOVE_DB) | (high >= FAR_DB)),  # clipping makes noise: named so
             judged & (widely < ABOVE_DB - SLACK_DB) & (high < FAR_DB - SLACK_DB),
         )
+        roars = judged & ~self._clipped.on & (widely >= FAR_DB)
+        self._roaring.push(roars, judged & (widely < FAR_DB - SLACK_DB))
         self._weak.push(judged & (low <= BELOW_DB), judged & (low > BELOW_DB + SLACK_DB))
         self._silent.push(judged & (high <= DEAD_DB), judged & (high > DEAD_DB + SLACK_DB))
 
