@@ -193,6 +193,6 @@ def test_maps_that_come_hold_what_their_hops_hold(outcome: Outcome) -> None:
 def test_a_map_after_missed_hops_says_gap(outcome: Outcome) -> None:
     firsts = first_samples(outcome)
     after = [m for m, step in zip(outcome.maps[1:], np.diff(firsts), strict=True) if step > HOP]
-    assert len(after) > 3
+    assert after
     assert all(m.header["limits"]["gap"] for m in after)
     assert outcome.maps[0].header["limits"]["gap"] is False

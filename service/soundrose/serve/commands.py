@@ -11,6 +11,7 @@ import zmq.asyncio
 
 from soundrose.contact.commands import Answer, Command, decode_answer, encode_command
 from soundrose.errors import WireError
+from soundrose.product.connecting import connect_to
 from soundrose.serve.problems import Problem
 
 __all__ = ["ANSWER_S", "CommandClient"]
@@ -32,7 +33,7 @@ class CommandClient:
         self._socket.setsockopt(zmq.IMMEDIATE, 1)  # to a contacts that is there; else the next try finds it
         self._socket.setsockopt(zmq.RECONNECT_IVL, 20)
         self._socket.setsockopt(zmq.RECONNECT_IVL_MAX, 200)
-        self._socket.connect(endpoint)
+        connect_to(self._socket, endpoint)
         self._answer_s = answer_s
         self._waiting: dict[str, asyncio.Future[Answer]] = {}
         self._reader: asyncio.Task[None] | None = None

@@ -13,7 +13,7 @@ import zmq.asyncio
 
 from soundrose.child import HEARTBEAT_S, Heartbeat, Lifeline, Orders, SlowLog, set_up_child
 from soundrose.errors import StartError, WireError
-from soundrose.product.addresses import connect_address
+from soundrose.product.connecting import connect_to
 from soundrose.product.codec import decode_published
 from soundrose.serve.app import Source, dress, make_app
 from soundrose.serve.commands import CommandClient
@@ -109,7 +109,7 @@ async def _serve(orders: Orders, lifeline: Lifeline, listener: socket.socket, ho
     server = uvicorn.Server(config)
     shown = f"[{host}]" if ":" in host else host
     try:
-        subscriber.connect(connect_address(orders.endpoints["publish"]))
+        connect_to(subscriber, orders.endpoints["publish"])
         await tap.start()
         await commands.start()
         async with asyncio.TaskGroup() as tasks:
