@@ -281,11 +281,12 @@ def _endpoints(settings: Settings) -> dict[str, str]:
         "control": settings.stream.control,
         "commands": settings.stream.commands,
     }
+    host = f"[{settings.serve.host}]" if ":" in settings.serve.host else settings.serve.host
     return {
         **{key: value.replace("{pid}", pid) for key, value in inside.items()},
         "feed": settings.feed.bind,
         "publish": settings.publish.bind,
-        "http": f"http://{settings.serve.host}:{settings.serve.port}",
+        "http": f"http://{host}:{settings.serve.port}",
     }
 
 

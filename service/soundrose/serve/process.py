@@ -13,8 +13,8 @@ import zmq.asyncio
 
 from soundrose.child import HEARTBEAT_S, Heartbeat, Lifeline, Orders, SlowLog, set_up_child
 from soundrose.errors import StartError, WireError
-from soundrose.product.connecting import connect_to
 from soundrose.product.codec import decode_published
+from soundrose.product.connecting import connect_to
 from soundrose.serve.app import Source, dress, make_app
 from soundrose.serve.commands import CommandClient
 from soundrose.serve.event_calls import add_events
