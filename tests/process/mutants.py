@@ -124,7 +124,8 @@ MUTANTS = (
         "self._at = 0", HEALTH, "-k", "named"),
     one("health: exclusion does not win", "feed/judge.py", "codes[conditions[code]] = code",
         "codes[conditions[max(code, 1)]] = max(code, 1)", HEALTH, "-k", "excluded"),
-    one("health: the sick stay in use", "feed/judge.py", "| self._reversed.on | self._roaring.on", "", HEALTH, "-k", "named"),
+    one("health: the sick stay in use", "feed/judge.py", "| self._reversed.on | self._roaring.on", "", HEALTH,
+        "-k", "named"),
     Mutant("health: a hardly better place is enough", (
         ("feed/phase.py", "BETTER: Final = 0.5", "BETTER: Final = 1.1"),
         ("feed/phase.py", "BETTER_EACH: Final = 0.7", "BETTER_EACH: Final = 1.5"),
