@@ -254,6 +254,7 @@ class Supervisor:
         self._out.write(json.dumps(line) + "\n")
         self._out.flush()
         self._systemd.ready()
+        _log.info("ready; the display is at %s", self._endpoints["http"])
 
     def _end_children(self) -> None:
         """The feed's end first, so that what was taken is worked off; then all others; then by force."""

@@ -189,6 +189,20 @@ def test_settings_give_array_and_address(feed, tmp_path):
 
 
 @pytest.mark.parametrize(
+    ("overload", "speed", "told"), [("drop", "max", True), ("drop", "1", False), ("hold", "max", False)]
+)
+def test_faster_than_real_time_into_drop_is_warned_of(feed, tmp_path, overload, speed, told):
+    """A recording played faster than a live array into a service that leaves hops out loses them in silence else."""
+    config = tmp_path / "bow.toml"
+    config.write_text(
+        SETTINGS.format(rate=8000.0, bind=feed.address).replace("[[bands]]", f'overload = "{overload}"\n[[bands]]')
+    )
+    path = write(tmp_path / "a.wav", noise(2, 100, 16), "PCM_16")
+    status, text = feed.play(path, config=config, to=None, array=None, speed=speed)
+    assert (status, "dropped_hops" in text) == (0, told)
+
+
+@pytest.mark.parametrize(
     ("rate", "channels", "words"),
     [(16000.0, 2, "feed.rate_hz = 16000"), (8000.0, 3, "3 channels would be sent, the settings list 2")],
 )

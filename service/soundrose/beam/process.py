@@ -170,6 +170,10 @@ class BandProcess:
         for note in given.notes:
             self._note(note)
         self._dropped_hops += given.missed
+        if given.missed:
+            self._log.warn(
+                "behind", f"band {self._band.name} is behind: {given.missed} hops left out (overload is drop)"
+            )
         hop = given.hop
         if not self._same_clock:  # ingest is on another host: the hop's arrival here is the nearest to its receipt
             hop = replace(hop, received_ns=time.monotonic_ns())

@@ -92,6 +92,12 @@ class FileOptions:
     timeout_s: float = 10.0
 
 
+DROP_WARNING = (
+    'these settings say overload = "drop": what the service cannot keep up with at this speed is left out of its maps '
+    'and counted in status (dropped_hops); overload = "hold" under [feed] waits instead'
+)
+
+
 def feed_file(recordings: Sequence[Path], options: FileOptions = FileOptions(), console: Console | None = None) -> int:
     """Plays recordings into a feed and returns the exit status; progress, summary and what is wrong go to `console`
     (standard error by default)."""
@@ -133,6 +139,8 @@ def _feed_file(recordings: Sequence[Path], options: FileOptions, console: Consol
         end=options.end,
         timeout_s=options.timeout_s,
     )
+    if settings is not None and settings.feed.overload == "drop" and parse_speed(options.speed) != 1:
+        _say(console, DROP_WARNING)
     sent = Sent()
     total = recording.duration_s * options.repeat if options.repeat else None
     _say(console, f"{_described(recording)} to {target.address}, array {how.array!r}, run {how.run!r}")
