@@ -1,5 +1,7 @@
 """Messages made by stock msgpack and sockets that are tracked, as any other program would make them."""
 
+import threading
+import time
 from collections.abc import Callable, Iterator
 from typing import Any
 
@@ -40,8 +42,20 @@ class Publisher:
         self.socket.setsockopt(zmq.LINGER, 0)
         self.socket.setsockopt(zmq.XPUB_VERBOSE, 1)
         self.socket.setsockopt(zmq.RCVTIMEO, LIMIT_MS)
-        self.socket.bind(address)
+        self._bind(address)
         self.address = self.socket.getsockopt_string(zmq.LAST_ENDPOINT)
+
+    def _bind(self, address: str) -> None:
+        """A socket closed before gives its port back from a thread of ZeroMQ's, some time after `close` returned."""
+        until = time.monotonic() + LIMIT_MS / 1000
+        while True:
+            try:
+                self.socket.bind(address)
+                return
+            except zmq.ZMQError as error:
+                if error.errno != zmq.EADDRINUSE or time.monotonic() > until:
+                    raise
+                threading.Event().wait(0.01)
 
     def wait(self) -> bytes:
         """The next subscription, or its end: b"\\x01topic", b"\\x00topic"."""
