@@ -95,8 +95,8 @@ class Outcome:
 
 
 def overload_run(folder: Path, pace: float) -> Outcome:
-    """About eight seconds of host time at that pace."""
-    blocks = max(60, round(8 * pace * ARRAY.rate_hz / BLOCK))
+    """About eight seconds of host time at that pace, and never less than ten of feed time."""
+    blocks = max(160, round(8 * pace * ARRAY.rate_hz / BLOCK))  # enough feed for some gaps, however slow the machine
     settings, sent = ARRAY.settings(HEAVY, overload="drop"), Sent()
     with Service(settings, folder) as service, service.listener() as listener, service.feeder() as feeder:
         feed(feeder, blocks, pace, sent)
@@ -193,6 +193,6 @@ def test_maps_that_come_hold_what_their_hops_hold(outcome: Outcome) -> None:
 def test_a_map_after_missed_hops_says_gap(outcome: Outcome) -> None:
     firsts = first_samples(outcome)
     after = [m for m, step in zip(outcome.maps[1:], np.diff(firsts), strict=True) if step > HOP]
-    assert after
+    assert len(after) > 3
     assert all(m.header["limits"]["gap"] for m in after)
     assert outcome.maps[0].header["limits"]["gap"] is False
